@@ -1,0 +1,1 @@
+"""Regressors under physical constraints, and the classical closures they are held to."""

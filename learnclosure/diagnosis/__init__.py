@@ -1,0 +1,1 @@
+"""From members to eddy fluxes, transport tensors and their sampling error."""

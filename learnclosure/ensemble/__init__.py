@@ -1,0 +1,1 @@
+"""Reading ensembles: files, roles, grids, units and readiness."""

@@ -1,0 +1,1 @@
+"""Predictor graphs, bundles and what a receiver checks before loading one."""

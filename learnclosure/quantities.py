@@ -1,0 +1,239 @@
+"""The one declarative table of every physical quantity learnclosure names.
+
+Reading, NetCDF attributes, graph inputs, manifests, the feature listing and the
+report all read their units, names and symmetries from here. Adding a quantity is
+adding a row.
+
+Parity says what a reflection of one axis (together with a change of sign of the
+Coriolis parameter) does to the value: ``scalar`` keeps it, ``pseudo-scalar`` changes
+its sign, ``vector`` components transform as a vector, ``pseudo-vector`` as a vector
+with one more change of sign, ``tensor`` as a second-order tensor.
+
+Locality says what a host must have at hand to compute the value: ``point``,
+``stencil 1`` (one neighbour each way), ``stencil 2``, ``column``, ``along-jet``,
+``domain``.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from dataclasses import dataclass
+from typing import Literal
+
+Parity = Literal["scalar", "pseudo-scalar", "vector", "pseudo-vector", "tensor"]
+Locality = Literal[
+    "point", "stencil 1", "stencil 2", "column", "column, stencil 1", "along-jet", "domain"
+]
+Group = Literal["role", "mean state", "statistic", "input", "feature"]
+
+LAYER_FIELD = ("layer", "y", "x")
+SURFACE_FIELD = ("y", "x")
+INTERFACE_FIELD = ("interface", "y", "x")
+
+
+@dataclass(frozen=True, slots=True)
+class Quantity:
+    """One row of the table.
+
+    Attributes
+    ----------
+    name : str
+        Identifier in artefacts, graph inputs and Python.
+    symbol : str
+        Usual symbol in plain text.
+    units : str
+        SI units in UDUNITS spelling; ``1`` for a pure number.
+    long_name : str
+        NetCDF ``long_name``.
+    group : str
+        Where in the work it belongs; see ``Group``.
+    standard_name : str or None
+        CF standard name where one exists.
+    dims : tuple of str
+        Dimensions it has in artefacts.
+    parity : str
+        Behaviour under reflection.
+    locality : str
+        What a host needs to compute it.
+    energy : bool
+        True where it needs eddy energy and so only serves hosts that carry it.
+    validity : str
+        Where it is defined; what stands in elsewhere.
+    source : str
+        Published source of the definition.
+    """
+
+    name: str
+    symbol: str
+    units: str
+    long_name: str
+    group: Group
+    standard_name: str | None = None
+    dims: tuple[str, ...] = LAYER_FIELD
+    parity: Parity = "scalar"
+    locality: Locality = "point"
+    energy: bool = False
+    validity: str = ""
+    source: str = ""
+
+    def attributes(self) -> dict[str, str]:
+        """Return the CF attributes a NetCDF variable of this quantity carries."""
+        attributes = {"long_name": self.long_name, "units": self.units}
+        if self.standard_name is not None:
+            attributes["standard_name"] = self.standard_name
+        return attributes
+
+
+def _rows(group: Group, rows: Iterable[Quantity]) -> dict[str, Quantity]:
+    table: dict[str, Quantity] = {}
+    for row in rows:
+        if row.group != group:
+            raise AssertionError(f"row {row.name} stands in the wrong group")
+        if row.name in table:
+            raise AssertionError(f"row {row.name} stands twice")
+        table[row.name] = row
+    return table
+
+
+ROLES: dict[str, Quantity] = _rows(
+    "role",
+    [
+        Quantity(
+            "x_velocity", "u", "m s-1", "velocity along x", "role", "sea_water_x_velocity",
+            parity="vector",
+        ),
+        Quantity(
+            "y_velocity", "v", "m s-1", "velocity along y", "role", "sea_water_y_velocity",
+            parity="vector",
+        ),
+        Quantity("thickness", "h", "m", "layer or cell thickness", "role", "cell_thickness"),
+        Quantity(
+            "buoyancy", "b", "m s-2", "buoyancy, minus g times the relative density anomaly", "role"
+        ),
+        Quantity(
+            "temperature", "T", "K", "temperature", "role", "sea_water_potential_temperature"
+        ),
+        Quantity("salinity", "S", "g kg-1", "salinity", "role", "sea_water_absolute_salinity"),
+        Quantity(
+            "reduced_gravity", "g'", "m s-2", "reduced gravity at the interface below a layer",
+            "role", dims=INTERFACE_FIELD,
+        ),
+    ],
+)  # fmt: skip
+
+MEAN_STATE: dict[str, Quantity] = _rows(
+    "mean state",
+    [
+        Quantity(
+            "x_velocity", "U", "m s-1", "mean velocity along x", "mean state",
+            "sea_water_x_velocity", parity="vector",
+        ),
+        Quantity(
+            "y_velocity", "V", "m s-1", "mean velocity along y", "mean state",
+            "sea_water_y_velocity", parity="vector",
+        ),
+        Quantity(
+            "layer_thickness", "H", "m", "mean layer thickness, zero on land", "mean state",
+            "cell_thickness",
+        ),
+        Quantity(
+            "reduced_gravity", "g'", "m s-2", "reduced gravity at the interface below a layer",
+            "mean state", dims=INTERFACE_FIELD, locality="column",
+        ),
+        Quantity(
+            "coriolis_parameter", "f", "s-1", "Coriolis parameter", "mean state",
+            "coriolis_parameter", dims=SURFACE_FIELD, parity="pseudo-scalar",
+        ),
+        Quantity(
+            "planetary_beta_x", "beta_x", "m-1 s-1", "gradient of the Coriolis parameter along x",
+            "mean state", dims=SURFACE_FIELD, parity="pseudo-vector",
+        ),
+        Quantity(
+            "planetary_beta_y", "beta_y", "m-1 s-1", "gradient of the Coriolis parameter along y",
+            "mean state", dims=SURFACE_FIELD, parity="pseudo-vector",
+        ),
+        Quantity(
+            "sea_floor_depth", "D", "m", "depth of the sea floor below the resting surface",
+            "mean state", "sea_floor_depth_below_geoid", dims=SURFACE_FIELD,
+        ),
+        Quantity(
+            "cell_width_x", "dx", "m", "width of the cell along x", "mean state",
+            dims=SURFACE_FIELD,
+        ),
+        Quantity(
+            "cell_width_y", "dy", "m", "width of the cell along y", "mean state",
+            dims=SURFACE_FIELD,
+        ),
+        Quantity(
+            "wet_share", "w", "1", "share of the cell area that is sea", "mean state",
+        ),
+        Quantity(
+            "eddy_kinetic_energy", "EKE", "m2 s-2",
+            "kinetic energy of the eddies per unit mass", "mean state", energy=True,
+            source="unbiased (N-1) half sum of the velocity variances",
+        ),
+    ],
+)  # fmt: skip
+
+STATISTICS: dict[str, Quantity] = _rows(
+    "statistic",
+    [
+        *(
+            Quantity(
+                f"transport_tensor_{row}{column}", f"K{row}{column}", "m2 s-1",
+                f"eddy transport tensor, flux along {row} down the gradient along {column}",
+                "statistic", parity="tensor",
+                source="J = -K grad C; Plumb and Mahlman 1987, J. Atmos. Sci. 44, 298-327",
+            )
+            for row in "xy"
+            for column in "xy"
+        ),
+        *(
+            Quantity(
+                f"least_squares_tensor_{row}{column}", f"K{row}{column}", "m2 s-1",
+                f"eddy transport tensor by plain least squares in each cell, "
+                f"flux along {row} down the gradient along {column}",
+                "statistic", parity="tensor",
+                source="J = -K grad C; Plumb and Mahlman 1987, J. Atmos. Sci. 44, 298-327",
+            )
+            for row in "xy"
+            for column in "xy"
+        ),
+        *(
+            Quantity(
+                f"symmetric_tensor_{pair}", f"S{pair}", "m2 s-1",
+                f"symmetric part of the eddy transport tensor, {pair} component", "statistic",
+                parity="tensor",
+            )
+            for pair in ("xx", "xy", "yy")
+        ),
+        Quantity(
+            "antisymmetric_tensor", "alpha", "m2 s-1",
+            "antisymmetric part of the eddy transport tensor, half of Kyx minus Kxy", "statistic",
+            parity="pseudo-scalar",
+            source="half of Kyx minus Kxy; defined up to a constant as a transport",
+        ),
+        Quantity(
+            "scalar_diffusivity", "k", "m2 s-1",
+            "scalar diffusivity that best fits the eddy fluxes of the cell", "statistic",
+        ),
+        Quantity(
+            "condition_number", "cond", "1",
+            "condition number of the matrix of weighted mean tracer gradients", "statistic",
+            source="ratio of singular values; cot(angle/2) for two unit gradients",
+        ),
+        Quantity(
+            "valid", "", "1", "1 where the transport tensor is determined by the data",
+            "statistic",
+        ),
+    ],
+)  # fmt: skip
+
+INPUTS: dict[str, Quantity] = _rows("input", [])
+
+FEATURES: dict[str, Quantity] = _rows("feature", [])
+
+
+TENSOR_COMPONENTS: tuple[str, ...] = tuple(
+    f"transport_tensor_{row}{column}" for row in "xy" for column in "xy"
+)

@@ -1,0 +1,1 @@
+"""Figures, the report page and the model card."""

@@ -1,0 +1,1 @@
+"""Built-in ensembles: a layered quasi-geostrophic channel and exactly solvable ones."""

@@ -1,0 +1,309 @@
+"""The study file: what to read, how to diagnose, what to train and what to ship.
+
+A study is a TOML file. Every key is described here once; unknown keys are errors.
+All numbers are in SI units unless the description says otherwise.
+"""
+
+from __future__ import annotations
+
+import tomllib
+from pathlib import Path
+from typing import Annotated, Literal
+
+from pydantic import BaseModel, ConfigDict, Field, ValidationError, model_validator
+
+from learnclosure.errors import StudyError
+
+Face = Literal["center", "east", "west", "north", "south"]
+Family = Literal["mean-field", "local-energy"]
+Regressor = Literal["ridge", "extra-trees", "histogram-boosting", "mlp", "trees-and-mlp"]
+Target = Literal["linear", "log-cholesky"]
+
+
+class Section(BaseModel):
+    """Common behaviour of all tables of a study: closed and immutable."""
+
+    model_config = ConfigDict(extra="forbid", frozen=True, populate_by_name=True)
+
+
+class VariableNames(Section):
+    """Names of variables in the files, only where attributes do not tell."""
+
+    x_velocity: str | None = Field(None, description="velocity along x")
+    y_velocity: str | None = Field(None, description="velocity along y")
+    tracers: tuple[str, ...] | None = Field(
+        None, description="tracers the tensor is determined from, at least two"
+    )
+    withheld_tracers: tuple[str, ...] = Field(
+        (), description="tracers never used in the inversion, kept to test it"
+    )
+    buoyancy: str | None = Field(None, description="buoyancy")
+    temperature: str | None = Field(None, description="temperature, for the stratification")
+    salinity: str | None = Field(None, description="salinity, for the stratification")
+
+
+class GridLayout(Section):
+    """Dimensions, faces and metric of the files, only where they do not tell."""
+
+    x: str | None = Field(None, description="coordinate along x")
+    y: str | None = Field(None, description="coordinate along y")
+    layer: str | None = Field(None, description="vertical dimension")
+    time: str | None = Field(None, description="time dimension")
+    member: str | None = Field(None, description="member dimension, if members share a file")
+    periodic: tuple[Literal["x", "y"], ...] | None = Field(None, description="periodic axes")
+    faces: dict[Literal["x_velocity", "y_velocity"], Face] = Field(
+        default_factory=dict,
+        description="face of the cell on which a velocity sits; cell centre if not named",
+    )
+    vertical: Literal["layers", "levels"] | None = Field(
+        None, description="whether vertical cells move with the fluid or stand still"
+    )
+    top: Literal["first", "last"] | None = Field(
+        None, description="which end of the vertical dimension is the surface"
+    )
+    layer_thickness: str | tuple[float, ...] | None = Field(
+        None, description="variable or list of resting thicknesses, m"
+    )
+    reduced_gravity: str | tuple[float, ...] | None = Field(
+        None, description="variable or list of reduced gravities at interfaces, m s-2"
+    )
+    sea_floor_depth: str | float | None = Field(
+        None, description="variable or value of the depth of the sea floor, m"
+    )
+    coriolis: str | float | None = Field(
+        None, description="variable or value at y = 0 of the Coriolis parameter, s-1"
+    )
+    beta: float | None = Field(
+        None, description="northward gradient of the Coriolis parameter, m-1 s-1"
+    )
+    latitude: str | float | None = Field(
+        None, description="variable or value of the latitude, degrees north"
+    )
+    dx: str | float | None = Field(None, description="variable or value of the cell width, m")
+    dy: str | float | None = Field(None, description="variable or value of the cell width, m")
+
+
+class Seawater(Section):
+    """How stratification follows from temperature and salinity."""
+
+    equation: Literal["linear", "teos-10"] = Field("linear", description="equation of state")
+    thermal_expansion: float | None = Field(
+        None, gt=0, description="linear equation: thermal expansion coefficient, K-1"
+    )
+    haline_contraction: float = Field(
+        0.0, ge=0, description="linear equation: haline contraction coefficient, kg g-1"
+    )
+    temperature_kind: Literal["conservative", "potential", "in-situ"] | None = Field(
+        None, description="teos-10: which temperature the files hold"
+    )
+
+
+class EnsembleTable(Section):
+    """One region: one ensemble with its own domain and regime."""
+
+    name: str = Field(pattern=r"^[A-Za-z0-9][A-Za-z0-9_-]*$", description="name of the region")
+    split: Literal["train", "test"] = Field("train", description="train on it or hold it out")
+    files: str | tuple[str, ...] = Field(
+        description="glob or list of NetCDF files, or a Zarr store, relative to the study"
+    )
+    variables: VariableNames = VariableNames()
+    grid: GridLayout = GridLayout()
+    seawater: Seawater | None = None
+
+    @property
+    def patterns(self) -> tuple[str, ...]:
+        """The file patterns as a tuple."""
+        return (self.files,) if isinstance(self.files, str) else self.files
+
+
+class DiagnosisSettings(Section):
+    """How eddy statistics and the transport tensor are computed."""
+
+    eddies: Literal["ensemble"] = Field(
+        "ensemble", description="eddies are departures from the ensemble mean"
+    )
+    coarsen: int = Field(2, ge=1, le=64, description="cells per coarse cell along x and y")
+    smoothing_length: float = Field(
+        16.0e3, ge=0, description="length over which the tensor is kept smooth, m"
+    )
+    floor: float = Field(50.0, ge=0, description="lowest eigenvalue of the symmetric part, m2 s-1")
+    floor_method: Literal["admm", "projection"] = Field(
+        "admm", description="floor inside the fit or by projection after it"
+    )
+    scalar_pull: float | None = Field(
+        None, ge=0, description="pull to the local scalar fit; by default only for few tracers"
+    )
+
+
+class FeatureSettings(Section):
+    """Which frame tensors and vectors are learned in."""
+
+    frame: Literal["pv-gradient"] = Field("pv-gradient", description="local frame")
+
+
+class ClosureSettings(Section):
+    """Which closures are trained and what binds them."""
+
+    families: tuple[Family, ...] = Field(
+        ("mean-field", "local-energy"), min_length=1, description="families by what a host gives"
+    )
+    regressors: tuple[Regressor, ...] = Field(
+        ("ridge", "extra-trees", "histogram-boosting", "mlp", "trees-and-mlp"),
+        min_length=1,
+        description="candidates, chosen by leaving one region out",
+    )
+    targets: tuple[Target, ...] = Field(
+        ("linear", "log-cholesky"), min_length=1, description="learnable form of the tensor"
+    )
+    floor: float = Field(50.0, gt=0, description="lowest eigenvalue of the symmetric part, m2 s-1")
+    cap: float = Field(5.0e4, gt=0, description="highest eigenvalue of the symmetric part, m2 s-1")
+    miscoverage: float = Field(
+        0.1, gt=0, lt=0.5, description="share of cells a half-width may miss in a new region"
+    )
+    seed: int = Field(0, ge=0, description="seed of everything random in training")
+
+    @model_validator(mode="after")
+    def _ordered(self) -> ClosureSettings:
+        if self.cap <= self.floor:
+            raise ValueError("cap must lie above floor")
+        return self
+
+
+class ValidationSettings(Section):
+    """How closures are scored."""
+
+    folds: int = Field(4, ge=2, le=20, description="folds of the random and blocked splits")
+    block_cells: int = Field(8, ge=1, description="side of a spatial block, coarse cells")
+
+
+class ExportSettings(Section):
+    """What the bundle says of itself."""
+
+    version: str = Field("0.1.0", pattern=r"^\d+\.\d+\.\d+$", description="version of the bundle")
+    licence: str = Field("CC-BY-4.0", description="SPDX expression for the bundle")
+    reference_points: int = Field(
+        256, ge=8, le=100_000, description="points whose inputs and outputs ship for checking"
+    )
+
+
+class Study(Section):
+    """A whole study.
+
+    Examples
+    --------
+    >>> text = '''
+    ... output = "results"
+    ... [[ensemble]]
+    ... name = "north"
+    ... files = "north/*.nc"
+    ... '''
+    >>> parse_study(text).ensembles[0].name
+    'north'
+    """
+
+    output: Path = Field(Path("results"), description="folder for all artefacts")
+    ensembles: tuple[EnsembleTable, ...] = Field(
+        alias="ensemble", min_length=1, description="one table per region"
+    )
+    diagnosis: DiagnosisSettings = DiagnosisSettings()
+    features: FeatureSettings = FeatureSettings()
+    closure: ClosureSettings = ClosureSettings()
+    validation: ValidationSettings = ValidationSettings()
+    export: ExportSettings = ExportSettings()
+    folder: Annotated[Path, Field(exclude=True, description="folder of the study file")] = Path()
+
+    @model_validator(mode="after")
+    def _distinct_names(self) -> Study:
+        names = [table.name for table in self.ensembles]
+        if len(set(names)) != len(names):
+            raise ValueError("two ensembles share one name")
+        if all(table.split == "test" for table in self.ensembles):
+            raise ValueError("at least one ensemble must have split = 'train'")
+        return self
+
+    @property
+    def output_folder(self) -> Path:
+        """Folder of the artefacts, relative paths taken from the study's folder."""
+        return self.output if self.output.is_absolute() else self.folder / self.output
+
+
+def _first_problem(error: ValidationError) -> tuple[str, str, object]:
+    problem = error.errors()[0]
+    key = ".".join(str(part) for part in problem["loc"])
+    if problem["type"] == "extra_forbidden":
+        return key, "unknown key", None
+    message = problem["msg"].removeprefix("Value error, ")
+    return key, message, problem.get("input")
+
+
+def parse_study(text: str, *, where: str = "study", folder: Path | None = None) -> Study:
+    """Read a study from TOML text.
+
+    Parameters
+    ----------
+    text : str
+        The TOML document.
+    where : str, optional
+        Name used in error messages.
+    folder : Path, optional
+        Folder that relative paths start from; the working folder if not given.
+
+    Returns
+    -------
+    Study
+
+    Raises
+    ------
+    StudyError
+        If the text is not TOML, has an unknown key or a value that is not allowed.
+    """
+    try:
+        tables = tomllib.loads(text)
+    except tomllib.TOMLDecodeError as error:
+        raise StudyError(
+            f"not a TOML document: {error}", where=where, remedy="correct the line it names"
+        ) from None
+    if "folder" in tables:
+        raise StudyError("unknown key", where=f"{where}: folder", remedy="remove it")
+    try:
+        return Study.model_validate({**tables, "folder": folder or Path()})
+    except ValidationError as error:
+        key, message, found = _first_problem(error)
+        plain = found if isinstance(found, (str, int, float, bool)) else None
+        raise StudyError(
+            message,
+            where=f"{where}: {key}" if key else where,
+            found=repr(plain) if plain is not None else None,
+            remedy="see 'learnclosure inspect --help' and the keys listed in the README",
+        ) from None
+
+
+def read_study(path: str | Path) -> Study:
+    """Read a study file.
+
+    Parameters
+    ----------
+    path : str or Path
+        A TOML file.
+
+    Returns
+    -------
+    Study
+
+    Raises
+    ------
+    StudyError
+        If the file cannot be read or is not a study.
+    """
+    file = Path(path)
+    try:
+        text = file.read_text(encoding="utf-8")
+    except OSError as error:
+        raise StudyError(
+            f"cannot be read: {error.strerror}", where=file, remedy="give the path of a study file"
+        ) from None
+    except UnicodeDecodeError:
+        raise StudyError(
+            "is not a UTF-8 text file", where=file, remedy="give the path of a study file"
+        ) from None
+    return parse_study(text, where=str(file), folder=file.parent)

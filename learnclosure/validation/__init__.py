@@ -1,0 +1,1 @@
+"""Folds, scores, selection, evaluation and the audit of constraints."""
