@@ -1,0 +1,324 @@
+"""The command line: arguments in, stages called, progress and results printed."""
+
+from __future__ import annotations
+
+import sys
+from collections.abc import Iterator
+from contextlib import contextmanager
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+import click
+from rich.console import Console
+from rich.progress import (
+    BarColumn,
+    Progress,
+    TaskID,
+    TaskProgressColumn,
+    TextColumn,
+    TimeElapsedColumn,
+    TimeRemainingColumn,
+)
+from rich.table import Table
+
+from learnclosure import __version__
+from learnclosure.errors import CheckFailedError, InputError, LearnclosureError
+
+if TYPE_CHECKING:
+    from learnclosure.workflow import Progress as ProgressCall
+
+STUDY = click.argument("study_file", metavar="STUDY", type=click.Path(path_type=Path))
+WORKERS = click.option(
+    "--workers",
+    type=click.IntRange(1, 64),
+    default=2,
+    show_default=True,
+    help="Regions worked on at once, each in a process of its own.",
+)
+console = Console(highlight=False)
+messages = Console(stderr=True, highlight=False)
+
+
+@contextmanager
+def progress_bars() -> Iterator[ProgressCall]:
+    """Draw one bar a task on a terminal; print one line a finished task elsewhere."""
+    if not messages.is_terminal:
+        finished: set[str] = set()
+
+        def line(task: str, share: float, note: str) -> None:
+            if share >= 1.0 and task not in finished:
+                finished.add(task)
+                messages.print(f"{task}: {note}" if note else task, markup=False)
+
+        yield line
+        return
+    columns = (
+        TextColumn("{task.description}"),
+        BarColumn(bar_width=24),
+        TaskProgressColumn(),
+        TimeElapsedColumn(),
+        TimeRemainingColumn(),
+        TextColumn("{task.fields[note]}"),
+    )
+    with Progress(*columns, console=messages) as bars:
+        tasks: dict[str, TaskID] = {}
+
+        def bar(task: str, share: float, note: str) -> None:
+            if task not in tasks:
+                tasks[task] = bars.add_task(task, total=1.0, note=note)
+            bars.update(tasks[task], completed=share, note=note)
+
+        yield bar
+
+
+def _example(command: str) -> str:
+    return f"Example: {command}"
+
+
+@click.group(
+    context_settings={"help_option_names": ["-h", "--help"]},
+    epilog=_example("learnclosure run study.toml"),
+)
+@click.version_option(__version__, prog_name="learnclosure")
+def commands() -> None:
+    """Turn ensembles of eddy-rich ocean simulations into verified eddy closures.
+
+    Exit codes: 0 done, 1 a check you asked for failed, 2 wrong input.
+    """
+
+
+@commands.command(epilog=_example("learnclosure demo"))
+@click.argument("folder", type=click.Path(path_type=Path), default=Path("demo"))
+@WORKERS
+def demo(folder: Path, workers: int) -> None:
+    """Run the whole job on the built-in channel ensembles, in FOLDER."""
+    from learnclosure.demonstration import run_demo
+
+    with progress_bars() as progress:
+        lines = run_demo(folder, progress=progress, workers=workers)
+    for text in lines:
+        console.print(text, markup=False, soft_wrap=True)
+
+
+@commands.command(epilog=_example("learnclosure simulate ensembles --region alder --members 8"))
+@click.argument("folder", type=click.Path(path_type=Path))
+@click.option(
+    "--kind",
+    type=click.Choice(["channel", "spinning", "plane-wave"]),
+    default="channel",
+    show_default=True,
+    help="Which built-in ensemble.",
+)
+@click.option("--region", "regions", multiple=True, help="Channel regions; all if not given.")
+@click.option("--members", type=click.IntRange(2, 10_000), default=12, show_default=True)
+@click.option("--snapshots", type=click.IntRange(1, 100_000), default=40, show_default=True)
+@click.option("--seed", type=click.IntRange(0), default=0, show_default=True)
+@WORKERS
+def simulate(
+    folder: Path, kind: str, regions: tuple[str, ...], members: int, snapshots: int, seed: int,
+    workers: int,
+) -> None:  # fmt: skip
+    """Write built-in ensembles as NetCDF, one file a member, into FOLDER."""
+    from learnclosure.demonstration import simulate_kind
+
+    with progress_bars() as progress:
+        written = simulate_kind(
+            folder, kind, regions=regions, members=members, snapshots=snapshots, seed=seed,
+            workers=workers, progress=progress,
+        )  # fmt: skip
+    for path in written:
+        console.print(str(path), markup=False, soft_wrap=True)
+
+
+@commands.command(epilog=_example("learnclosure inspect study.toml"))
+@click.argument("study_file", metavar="STUDY", type=click.Path(path_type=Path), required=False)
+@click.option("--features", is_flag=True, help="List the features a closure may use and stop.")
+def inspect(study_file: Path | None, features: bool) -> None:
+    """Say what was understood of each ensemble and whether the STUDY can run."""
+    from learnclosure import listing
+
+    if features:
+        console.print(listing.feature_listing())
+        return
+    if study_file is None:
+        raise click.UsageError("give a STUDY, or --features")
+    from learnclosure.ensemble.readiness import inspect_ensemble
+    from learnclosure.study import read_study
+
+    study = read_study(study_file)
+    problems: list[str] = []
+    for table in study.ensembles:
+        readiness = inspect_ensemble(table, study.folder)
+        for part in listing.readiness_listing(readiness):
+            console.print(part)
+        problems += readiness.problems
+    if problems:
+        raise InputError(
+            f"the study cannot run: {len(problems)} problem(s), first: {problems[0]}",
+            where=study_file,
+            remedy="correct what is listed above",
+        )
+    console.print(f"{study_file}: the study can run", markup=False, soft_wrap=True)
+
+
+@commands.command(epilog=_example("learnclosure diagnose study.toml --workers 2"))
+@STUDY
+@WORKERS
+def diagnose(study_file: Path, workers: int) -> None:
+    """Compute eddy statistics and the transport tensor of every region."""
+    from learnclosure.study import read_study
+    from learnclosure.workflow import artefacts, diagnose_study
+
+    study = read_study(study_file)
+    with progress_bars() as progress:
+        diagnose_study(study, progress=progress, workers=workers)
+    for table in study.ensembles:
+        console.print(str(artefacts(study).statistics(table.name)), markup=False, soft_wrap=True)
+
+
+@commands.command(epilog=_example("learnclosure train study.toml"))
+@STUDY
+def train(study_file: Path) -> None:
+    """Choose and fit one closure for each family."""
+    from learnclosure.study import read_study
+    from learnclosure.workflow import artefacts, train_study
+
+    study = read_study(study_file)
+    with progress_bars() as progress:
+        train_study(study, progress=progress)
+    for family in study.closure.families:
+        console.print(str(artefacts(study).selection(family)), markup=False, soft_wrap=True)
+
+
+@commands.command(epilog=_example("learnclosure evaluate study.toml"))
+@STUDY
+def evaluate(study_file: Path) -> None:
+    """Score the closures beside ceiling and baselines, and audit their constraints."""
+    from learnclosure import listing
+    from learnclosure.study import read_study
+    from learnclosure.workflow import artefacts, evaluate_study
+
+    study = read_study(study_file)
+    with progress_bars() as progress:
+        record = evaluate_study(study, progress=progress)
+    for part in listing.evaluation_listing(record):
+        console.print(part)
+    console.print(str(artefacts(study).evaluation), markup=False, soft_wrap=True)
+    _require_audit(record, artefacts(study).evaluation)
+
+
+def _require_audit(record: dict[str, object], path: Path) -> None:
+    from learnclosure.workflow import failed_checks
+
+    failed = failed_checks(record)
+    if failed:
+        raise CheckFailedError(
+            f"the audit failed: {'; '.join(failed)}",
+            where=path,
+            remedy="do not ship this closure; see the audit table in the report",
+        )
+
+
+@commands.command(epilog=_example("learnclosure export study.toml"))
+@STUDY
+def export(study_file: Path) -> None:
+    """Write a verified bundle for each trained family."""
+    from learnclosure.delivery import export_study
+    from learnclosure.study import read_study
+    from learnclosure.workflow import artefacts
+
+    study = read_study(study_file)
+    with progress_bars() as progress:
+        export_study(study, progress=progress)
+    for family in study.closure.families:
+        console.print(str(artefacts(study).bundle(family)), markup=False, soft_wrap=True)
+
+
+@commands.command(epilog=_example("learnclosure report study.toml"))
+@STUDY
+def report(study_file: Path) -> None:
+    """Write the report page."""
+    from learnclosure.delivery import report_study
+    from learnclosure.study import read_study
+
+    study = read_study(study_file)
+    with progress_bars() as progress:
+        path = report_study(study, progress=progress)
+    console.print(str(path), markup=False, soft_wrap=True)
+
+
+@commands.command(epilog=_example("learnclosure run study.toml"))
+@STUDY
+@WORKERS
+def run(study_file: Path, workers: int) -> None:
+    """Run every stage; stages whose inputs are unchanged are kept."""
+    from learnclosure.study import read_study
+    from learnclosure.workflow import artefacts, read_json, run_study
+
+    study = read_study(study_file)
+    with progress_bars() as progress:
+        run_study(study, progress=progress, workers=workers)
+    places = artefacts(study)
+    for family in study.closure.families:
+        console.print(str(places.bundle(family)), markup=False, soft_wrap=True)
+    console.print(str(places.report), markup=False, soft_wrap=True)
+    _require_audit(read_json(places.evaluation, "run the study again"), places.evaluation)
+
+
+@commands.command(epilog=_example("learnclosure verify results/bundle/local-energy"))
+@click.argument("bundle", type=click.Path(path_type=Path))
+def verify(bundle: Path) -> None:
+    """Check a BUNDLE: sums, graph, declared inputs, reference outputs."""
+    from learnclosure.export.gate import verify_bundle
+
+    outcome = verify_bundle(bundle)
+    table = Table(title=str(bundle), title_justify="left")
+    for heading in ("check", "result", "found"):
+        table.add_column(heading, overflow="fold")
+    for check in outcome.checks:
+        table.add_row(check.name, "passed" if check.passed else "FAILED", check.found)
+    console.print(table)
+    failed = [check.name for check in outcome.checks if not check.passed]
+    if failed:
+        raise CheckFailedError(
+            f"the bundle failed: {', '.join(failed)}",
+            where=bundle,
+            remedy="do not load it; ask its author for an intact copy",
+        )
+    console.print(f"{bundle}: verified", markup=False, soft_wrap=True)
+
+
+@commands.command(
+    epilog=_example("learnclosure predict results/bundle/mean-field means.nc tensor.nc")
+)
+@click.argument("bundle", type=click.Path(path_type=Path))
+@click.argument("source", metavar="IN", type=click.Path(path_type=Path))
+@click.argument("target", metavar="OUT", type=click.Path(path_type=Path))
+def predict(bundle: Path, source: Path, target: Path) -> None:
+    """Apply a BUNDLE to the mean fields in IN and write the tensor to OUT."""
+    from learnclosure.export.predictor import predict_file
+
+    predict_file(bundle, source, target)
+    console.print(str(target), markup=False, soft_wrap=True)
+
+
+def main(arguments: list[str] | None = None) -> None:
+    """Run the command line and leave with its exit code.
+
+    Parameters
+    ----------
+    arguments : list of str, optional
+        Words after the program's name; those of the process if not given.
+    """
+    try:
+        code = commands.main(args=arguments, prog_name="learnclosure", standalone_mode=False)
+    except click.ClickException as error:
+        error.show()
+        sys.exit(error.exit_code)
+    except (click.Abort, KeyboardInterrupt):
+        messages.print("stopped; give the same command again to go on")
+        sys.exit(130)
+    except LearnclosureError as error:
+        messages.print(f"learnclosure: {error}", markup=False, soft_wrap=True)
+        sys.exit(error.exit_code)
+    sys.exit(code if isinstance(code, int) else 0)

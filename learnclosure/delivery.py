@@ -1,0 +1,253 @@
+"""The last stages of a study: bundles that ship and the report page."""
+
+from __future__ import annotations
+
+import platform
+from collections.abc import Mapping
+from importlib.metadata import version
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+import numpy.typing as npt
+
+from learnclosure import __version__
+from learnclosure.stages import file_digest, fingerprint
+from learnclosure.study import Study
+from learnclosure.workflow import (
+    Progress,
+    artefacts,
+    load_closures,
+    load_statistics,
+    read_json,
+    silent,
+)
+
+if TYPE_CHECKING:
+    import xarray as xr
+
+    from learnclosure.closures.closure import Closure
+
+FloatArray = npt.NDArray[np.float64]
+TRACKED_LIBRARIES = ("numpy", "scipy", "scikit-learn", "xarray", "numba", "onnx", "onnxruntime")
+
+
+def mean_state_inputs(statistics: xr.Dataset) -> dict[str, FloatArray]:
+    """Compute the point inputs of one region.
+
+    Parameters
+    ----------
+    statistics : xarray.Dataset
+        Contents of ``statistics.nc``.
+
+    Returns
+    -------
+    dict of str to ndarray, shape (layer, y, x)
+        Inputs in SI units, by name.
+    """
+    from learnclosure.features.inputs import compute_inputs
+    from learnclosure.features.mean_state import MeanState
+
+    arrays = {str(name): np.asarray(statistics[name].values) for name in statistics.variables}
+    return compute_inputs(MeanState.from_mapping(arrays, dict(statistics.attrs)))
+
+
+def predict_region(closure: Closure, statistics: xr.Dataset) -> dict[str, FloatArray]:
+    """Apply a closure to the mean state of one region.
+
+    Parameters
+    ----------
+    closure : Closure
+    statistics : xarray.Dataset
+
+    Returns
+    -------
+    dict of str to ndarray, shape (layer, y, x)
+        Tensor components and half-widths in m2 s-1 and trust; NaN on land.
+    """
+    inputs = mean_state_inputs(statistics)
+    wet = np.asarray(statistics["wet_share"].values) > 0.0
+    prediction = closure.predict({name: values[wet] for name, values in inputs.items()})
+
+    def spread(values: FloatArray) -> FloatArray:
+        field = np.full(wet.shape, np.nan)
+        field[wet] = values
+        return field
+
+    fields: dict[str, FloatArray] = {"trust": spread(prediction.trust)}
+    for number, pair in enumerate(("xx", "xy", "yx", "yy")):
+        fields[f"transport_tensor_{pair}"] = spread(prediction.tensor[:, number])
+        fields[f"half_width_{pair}"] = spread(prediction.half_width[:, number])
+    return fields
+
+
+def reference_inputs(
+    statistics: Mapping[str, xr.Dataset], points: int, seed: int
+) -> dict[str, FloatArray]:
+    """Draw points whose inputs ship with a bundle for checking it.
+
+    Parameters
+    ----------
+    statistics : mapping of str to xarray.Dataset
+    points : int
+        Number of points drawn over all regions without replacement.
+    seed : int
+
+    Returns
+    -------
+    dict of str to ndarray, shape (point,)
+    """
+    columns: dict[str, list[FloatArray]] = {}
+    for dataset in statistics.values():
+        wet = np.asarray(dataset["wet_share"].values) > 0.0
+        for name, values in mean_state_inputs(dataset).items():
+            columns.setdefault(name, []).append(values[wet])
+    joined = {name: np.concatenate(parts) for name, parts in columns.items()}
+    total = len(next(iter(joined.values())))
+    drawn = np.random.default_rng(seed).permutation(total)[: min(points, total)]
+    drawn.sort()
+    return {name: values[drawn] for name, values in joined.items()}
+
+
+def provenance(study: Study, statistics: Mapping[str, xr.Dataset]) -> dict[str, Any]:
+    """Say what a closure was trained from and with.
+
+    Parameters
+    ----------
+    study : Study
+    statistics : mapping of str to xarray.Dataset
+        Statistics of the training regions.
+
+    Returns
+    -------
+    dict
+        JSON-serialisable.
+    """
+    places = artefacts(study)
+    return {
+        "regions": [
+            {
+                "name": name,
+                "members": int(dataset.attrs["members"]),
+                "snapshots": int(dataset.attrs["snapshots"]),
+                "eddy_definition": str(dataset.attrs["eddy_definition"]),
+                "input_sha256": str(dataset.attrs.get("input_sha256", "")),
+                "statistics_sha256": file_digest(places.statistics(name)),
+            }
+            for name, dataset in statistics.items()
+        ],
+        "seed": study.closure.seed,
+        "settings": {
+            "diagnosis": study.diagnosis.model_dump(mode="json"),
+            "features": study.features.model_dump(mode="json"),
+            "closure": study.closure.model_dump(mode="json"),
+        },
+        "versions": {
+            "learnclosure": __version__,
+            "python": platform.python_version(),
+            **{name: version(name) for name in TRACKED_LIBRARIES},
+        },
+    }
+
+
+def _bundle_files(folder: Path) -> list[Path]:
+    return sorted(path for path in folder.rglob("*") if path.is_file())
+
+
+def export_study(study: Study, *, progress: Progress = silent) -> None:
+    """Ship each trained closure as a verified bundle.
+
+    Parameters
+    ----------
+    study : Study
+    progress : callable, optional
+
+    Raises
+    ------
+    LearnclosureError
+        If an earlier stage is missing or an exported form does not agree with the closure.
+    """
+    from learnclosure.export.bundle import export_bundle
+    from learnclosure.report.model_card import render_model_card
+
+    places = artefacts(study)
+    statistics = load_statistics(study)
+    closures = load_closures(study)
+    evaluation = read_json(places.evaluation, "run 'learnclosure evaluate' on the study first")
+    training = {
+        table.name: statistics[table.name] for table in study.ensembles if table.split == "train"
+    }
+    for family, closure in closures.items():
+        folder = places.bundle(family)
+        stage = f"export-{family}"
+        mark = fingerprint(
+            stage,
+            {
+                "settings": study.export.model_dump(mode="json"),
+                "closure": file_digest(places.closure(family)),
+                "evaluation": file_digest(places.evaluation),
+            },
+        )
+        standing = _bundle_files(folder) if folder.is_dir() else []
+        if standing and places.current(stage, mark, standing):
+            progress(f"export {family}", 1.0, "stands already")
+            continue
+        progress(f"export {family}", 0.0, "")
+        export_bundle(
+            closure,
+            folder,
+            provenance=provenance(study, training),
+            evaluation=evaluation,
+            reference_inputs=reference_inputs(
+                statistics, study.export.reference_points, study.closure.seed
+            ),
+            settings=study.export,
+            render_card=render_model_card,
+        )
+        places.note(stage, mark, _bundle_files(folder))
+        progress(f"export {family}", 1.0, "done")
+
+
+def report_study(study: Study, *, progress: Progress = silent) -> Path:
+    """Write the report page of a study.
+
+    Parameters
+    ----------
+    study : Study
+    progress : callable, optional
+
+    Returns
+    -------
+    Path
+        The page.
+
+    Raises
+    ------
+    LearnclosureError
+        If an earlier stage is missing.
+    """
+    from learnclosure.report.page import write_report
+
+    places = artefacts(study)
+    statistics = load_statistics(study)
+    closures = load_closures(study)
+    evaluation = read_json(places.evaluation, "run 'learnclosure evaluate' on the study first")
+    mark = fingerprint(
+        "report",
+        {
+            "evaluation": file_digest(places.evaluation),
+            "closures": {name: file_digest(places.closure(name)) for name in closures},
+        },
+    )
+    if places.current("report", mark, [places.report]):
+        progress("report", 1.0, "stands already")
+        return places.report
+    progress("report", 0.0, "")
+    predictions = {
+        family: {name: predict_region(closure, data) for name, data in statistics.items()}
+        for family, closure in closures.items()
+    }
+    write_report(places.report, evaluation, statistics, predictions)
+    places.note("report", mark, [places.report])
+    progress("report", 1.0, "done")
+    return places.report

@@ -1,0 +1,103 @@
+"""Tables the command line prints."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import TYPE_CHECKING, Any
+
+from rich.table import Table
+
+from learnclosure.quantities import FEATURES, INPUTS
+
+if TYPE_CHECKING:
+    from rich.console import RenderableType
+
+    from learnclosure.ensemble.readiness import Readiness
+
+
+def _table(title: str, *headings: str) -> Table:
+    table = Table(title=title, title_justify="left")
+    for heading in headings:
+        table.add_column(heading, overflow="fold")
+    return table
+
+
+def feature_listing() -> Table:
+    """List every input and feature with units, symmetry, locality and source.
+
+    Returns
+    -------
+    rich.table.Table
+    """
+    table = _table(
+        "what a closure may use", "name", "kind", "units", "parity", "locality", "meaning", "source"
+    )
+    for quantity in (*INPUTS.values(), *FEATURES.values()):
+        kind = f"{quantity.group}, eddy energy" if quantity.energy else quantity.group
+        table.add_row(
+            quantity.name, kind, quantity.units, quantity.parity, quantity.locality,
+            quantity.long_name, quantity.source,
+        )  # fmt: skip
+    return table
+
+
+def _cells(values: list[float | None] | None) -> str:
+    if values is None:
+        return "-"
+    return " / ".join("-" if value is None else f"{value:.2f}" for value in values)
+
+
+def evaluation_listing(evaluation: Mapping[str, Any]) -> list[Table]:
+    """Tabulate flux scores by region and the audit.
+
+    Parameters
+    ----------
+    evaluation : mapping
+        Contents of ``evaluation.json``.
+
+    Returns
+    -------
+    list of rich.table.Table
+    """
+    regions = list(evaluation["ceiling"])
+    scores = _table(
+        "flux R2 by layer, from the top; training regions out of fold", "closure", *regions
+    )
+    rows: list[tuple[str, Mapping[str, Any]]] = [
+        *evaluation["families"].items(),
+        *evaluation["baselines"].items(),
+    ]
+    for name, record in rows:
+        found = record["regions"]
+        scores.add_row(
+            name,
+            *(_cells(found[region]["scores"]["flux_r2"] if region in found else None)
+              for region in regions),
+        )  # fmt: skip
+    halves = evaluation["ceiling"]
+    scores.add_row(
+        "tensor of an independent half",
+        *(_cells(halves[region]["flux_r2"] if halves[region] else None) for region in regions),
+    )
+    audit = _table("audit", "family", "check", "result", "value", "limit")
+    for family, checks in evaluation["audit"].items():
+        for check in checks:
+            audit.add_row(
+                family, check["check"], "passed" if check["passed"] else "FAILED",
+                f"{check['value']:.3g}", f"{check['limit']:.3g}",
+            )  # fmt: skip
+    return [scores, audit]
+
+
+def readiness_listing(readiness: Readiness) -> list[RenderableType]:
+    """Tabulate what was understood of one ensemble.
+
+    Parameters
+    ----------
+    readiness : Readiness
+
+    Returns
+    -------
+    list of renderables
+    """
+    raise AssertionError(readiness)

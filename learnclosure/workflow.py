@@ -1,0 +1,394 @@
+"""The stages of a study in order, each resumable and callable on its own.
+
+Each stage reads artefacts, writes one kind of artefact and records what it was made
+from; a stage whose inputs are unchanged is not run again.
+"""
+
+from __future__ import annotations
+
+import json
+import os
+from collections.abc import Callable, Mapping
+from concurrent.futures import ProcessPoolExecutor, as_completed
+from multiprocessing import get_context
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from learnclosure.atomic import atomic_path, prepare_folder
+from learnclosure.errors import InputError, TrainingError
+from learnclosure.stages import Artefacts, file_digest, fingerprint
+from learnclosure.study import EnsembleTable, Study
+
+if TYPE_CHECKING:
+    import xarray as xr
+
+    from learnclosure.closures.closure import Closure
+
+Progress = Callable[[str, float, str], None]
+"""Called with the name of a task, the share done (0 to 1) and a short note."""
+
+
+def silent(task: str, share: float, note: str) -> None:
+    """Report nothing: the default progress of every stage."""
+
+
+def artefacts(study: Study) -> Artefacts:
+    """Return where the artefacts of a study lie."""
+    return Artefacts(study.output_folder)
+
+
+def _sources_mark(study: Study, table: EnsembleTable) -> list[list[str | int]]:
+    from learnclosure.ensemble.sources import find_files
+
+    marks: list[list[str | int]] = []
+    for path in find_files(table, study.folder):
+        members = sorted(path.rglob("*")) if path.is_dir() else [path]
+        for member in members:
+            if member.is_file():
+                state = member.stat()
+                marks.append([str(member), state.st_size, state.st_mtime_ns])
+    return marks
+
+
+def _diagnose_region(study: Study, table: EnsembleTable) -> None:
+    from learnclosure.diagnosis.artefact import write_statistics
+    from learnclosure.diagnosis.diagnose import diagnose
+    from learnclosure.ensemble.reader import open_ensemble
+    from learnclosure.features.artefact import write_features
+
+    places = artefacts(study)
+    with open_ensemble(table, study.folder) as ensemble:
+        statistics = diagnose(ensemble, study.diagnosis)
+    write_statistics(statistics, places.statistics(table.name))
+    write_features(statistics, places.features(table.name))
+
+
+def diagnose_study(study: Study, *, progress: Progress = silent, workers: int = 2) -> None:
+    """Compute eddy statistics, transport tensors and features of every region.
+
+    Parameters
+    ----------
+    study : Study
+    progress : callable, optional
+        Called with ``(region, share done, note)``.
+    workers : int, optional
+        Regions worked on at once, each in a process of its own.
+
+    Raises
+    ------
+    InputError
+        If an ensemble cannot be read or cannot carry a tensor.
+    """
+    places = artefacts(study)
+    prepare_folder(places.root)
+    marks: dict[str, str] = {}
+    pending: list[EnsembleTable] = []
+    for table in study.ensembles:
+        mark = fingerprint(
+            "diagnose",
+            {
+                "ensemble": table.model_dump(mode="json"),
+                "settings": study.diagnosis.model_dump(mode="json"),
+                "sources": _sources_mark(study, table),
+            },
+        )
+        outputs = [places.statistics(table.name), places.features(table.name)]
+        marks[table.name] = mark
+        if places.current(f"diagnose-{table.name}", mark, outputs):
+            progress(f"diagnose {table.name}", 1.0, "stands already")
+        else:
+            pending.append(table)
+            progress(f"diagnose {table.name}", 0.0, "")
+
+    def done(table: EnsembleTable) -> None:
+        outputs = [places.statistics(table.name), places.features(table.name)]
+        places.note(f"diagnose-{table.name}", marks[table.name], outputs)
+        progress(f"diagnose {table.name}", 1.0, "done")
+
+    if min(workers, len(pending)) <= 1:
+        for table in pending:
+            _diagnose_region(study, table)
+            done(table)
+        return
+    with ProcessPoolExecutor(workers, mp_context=get_context("spawn")) as pool:
+        jobs = {pool.submit(_diagnose_region, study, table): table for table in pending}
+        try:
+            for job in as_completed(jobs):
+                job.result()
+                done(jobs[job])
+        except BaseException:
+            pool.shutdown(wait=False, cancel_futures=True)
+            raise
+
+
+def load_statistics(study: Study, split: str | None = None) -> dict[str, xr.Dataset]:
+    """Load the diagnosed statistics of a study's regions.
+
+    Parameters
+    ----------
+    study : Study
+    split : {"train", "test"}, optional
+        Only regions of this split.
+
+    Returns
+    -------
+    dict of str to xarray.Dataset
+
+    Raises
+    ------
+    TrainingError
+        If a region has not been diagnosed yet.
+    """
+    import xarray as xr
+
+    places = artefacts(study)
+    loaded: dict[str, xr.Dataset] = {}
+    for table in study.ensembles:
+        if split is not None and table.split != split:
+            continue
+        path = places.statistics(table.name)
+        if not path.is_file():
+            raise TrainingError(
+                "the region has not been diagnosed",
+                where=path,
+                remedy="run 'learnclosure diagnose' on the study first",
+            )
+        with xr.open_dataset(path, engine="h5netcdf") as dataset:
+            loaded[table.name] = dataset.load()
+    return loaded
+
+
+def load_closures(study: Study) -> dict[str, Closure]:
+    """Load the trained closures of a study.
+
+    Parameters
+    ----------
+    study : Study
+
+    Returns
+    -------
+    dict of str to Closure
+        Keyed by family.
+
+    Raises
+    ------
+    TrainingError
+        If a family has not been trained yet.
+    """
+    import joblib
+
+    places = artefacts(study)
+    closures: dict[str, Closure] = {}
+    for family in study.closure.families:
+        path = places.closure(family)
+        if not path.is_file():
+            raise TrainingError(
+                "the family has not been trained",
+                where=path,
+                remedy="run 'learnclosure train' on the study first",
+            )
+        closures[family] = joblib.load(path)
+    return closures
+
+
+def _statistics_digests(study: Study, split: str | None = None) -> dict[str, str]:
+    places = artefacts(study)
+    return {
+        table.name: file_digest(places.statistics(table.name))
+        for table in study.ensembles
+        if split is None or table.split == split
+    }
+
+
+def train_study(study: Study, *, progress: Progress = silent) -> None:
+    """Choose and fit one closure for each family of the study.
+
+    Parameters
+    ----------
+    study : Study
+    progress : callable, optional
+        Called with ``(family, share done, note)``.
+
+    Raises
+    ------
+    TrainingError
+        If a region has not been diagnosed or the table cannot be trained from.
+    """
+    import joblib
+
+    from learnclosure.closures.table import table_from_statistics
+    from learnclosure.validation.selection import select_closure
+
+    places = artefacts(study)
+    statistics = load_statistics(study, "train")
+    table = None
+    for family in study.closure.families:
+        stage = f"train-{family}"
+        mark = fingerprint(
+            stage,
+            {
+                "closure": study.closure.model_dump(mode="json"),
+                "features": study.features.model_dump(mode="json"),
+                "validation": study.validation.model_dump(mode="json"),
+                "statistics": _statistics_digests(study, "train"),
+            },
+        )
+        outputs = [places.closure(family), places.selection(family)]
+        if places.current(stage, mark, outputs):
+            progress(f"train {family}", 1.0, "stands already")
+            continue
+        if table is None:
+            table = table_from_statistics(list(statistics.values()))
+
+        def family_progress(share: float, note: str, family: str = family) -> None:
+            progress(f"train {family}", share, note)
+
+        closure, selection = select_closure(
+            table,
+            statistics,
+            family,
+            study.closure,
+            study.validation,
+            progress=family_progress,
+        )
+        with atomic_path(places.closure(family)) as temporary:
+            joblib.dump(closure, temporary)
+        write_json(places.selection(family), selection.as_record())
+        places.note(stage, mark, outputs)
+        progress(f"train {family}", 1.0, "done")
+
+
+def write_json(path: Path, record: Mapping[str, Any]) -> None:
+    """Write a JSON document atomically, with sorted keys and a final newline.
+
+    Parameters
+    ----------
+    path : Path
+    record : mapping
+
+    Raises
+    ------
+    OutputError
+        If it cannot be written.
+    """
+    text = json.dumps(record, indent=1, sort_keys=True, allow_nan=False)
+    with atomic_path(path) as temporary:
+        temporary.write_text(text + "\n", encoding="utf-8")
+
+
+def read_json(path: Path, remedy: str) -> dict[str, Any]:
+    """Read a JSON artefact.
+
+    Parameters
+    ----------
+    path : Path
+    remedy : str
+        What to do if it is missing or unreadable.
+
+    Returns
+    -------
+    dict
+
+    Raises
+    ------
+    InputError
+        If it is missing or not a JSON object.
+    """
+    try:
+        record = json.loads(path.read_text(encoding="utf-8"))
+    except OSError:
+        raise InputError("does not exist or cannot be read", where=path, remedy=remedy) from None
+    except ValueError:
+        raise InputError("is not a JSON document", where=path, remedy=remedy) from None
+    if not isinstance(record, dict):
+        raise InputError("is not a JSON object", where=path, remedy=remedy)
+    return record
+
+
+def evaluate_study(study: Study, *, progress: Progress = silent) -> dict[str, Any]:
+    """Score the closures of a study, beside ceiling and baselines, and audit them.
+
+    Parameters
+    ----------
+    study : Study
+    progress : callable, optional
+
+    Returns
+    -------
+    dict
+        The contents of ``evaluation.json``.
+
+    Raises
+    ------
+    TrainingError
+        If a region or family is missing.
+    """
+    from learnclosure.validation.evaluation import evaluate
+
+    places = artefacts(study)
+    statistics = load_statistics(study)
+    closures = load_closures(study)
+    mark = fingerprint(
+        "evaluate",
+        {
+            "closure": study.closure.model_dump(mode="json"),
+            "validation": study.validation.model_dump(mode="json"),
+            "statistics": _statistics_digests(study),
+            "splits": {table.name: table.split for table in study.ensembles},
+            "closures": {name: file_digest(places.closure(name)) for name in closures},
+        },
+    )
+    remedy = "run 'learnclosure evaluate' on the study first"
+    if places.current("evaluate", mark, [places.evaluation]):
+        progress("evaluate", 1.0, "stands already")
+        return read_json(places.evaluation, remedy)
+    selections = {
+        family: read_json(places.selection(family), "run 'learnclosure train' again")
+        for family in closures
+    }
+    record = evaluate(
+        statistics,
+        closures,
+        selections,
+        study.closure,
+        study.validation,
+        progress=lambda share, note: progress("evaluate", share, note),
+    )
+    write_json(places.evaluation, record)
+    places.note("evaluate", mark, [places.evaluation])
+    progress("evaluate", 1.0, "done")
+    return record
+
+
+def failed_checks(evaluation: Mapping[str, Any]) -> list[str]:
+    """List the audit checks that did not pass, as ``family: check``."""
+    return [
+        f"{family}: {check['check']}"
+        for family, checks in evaluation["audit"].items()
+        for check in checks
+        if not check["passed"]
+    ]
+
+
+def run_study(study: Study, *, progress: Progress = silent, workers: int | None = None) -> None:
+    """Run every stage of a study, from ensembles to bundles and report.
+
+    Parameters
+    ----------
+    study : Study
+    progress : callable, optional
+    workers : int, optional
+        Regions diagnosed at once; by default two, or one on a single core.
+
+    Raises
+    ------
+    LearnclosureError
+        If a stage cannot be carried out.
+    """
+    from learnclosure.delivery import export_study, report_study
+
+    diagnose_study(study, progress=progress, workers=workers or min(2, os.cpu_count() or 1))
+    train_study(study, progress=progress)
+    evaluate_study(study, progress=progress)
+    export_study(study, progress=progress)
+    report_study(study, progress=progress)
