@@ -1,0 +1,337 @@
+"""The diagnosis of one region: from its ensemble to ``statistics.nc``."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from typing import Any
+
+import numpy as np
+import numpy.typing as npt
+import xarray as xr
+
+from learnclosure import __version__
+from learnclosure.diagnosis.artefact import StatisticsBuilder
+from learnclosure.diagnosis.coarse import Coarsening
+from learnclosure.diagnosis.estimate import Estimator, GroupEstimate, WithheldSkill
+from learnclosure.diagnosis.inversion import SmoothInversion
+from learnclosure.diagnosis.moments import EnsembleSource, Moments, accumulate_moments
+from learnclosure.diagnosis.tensor import (
+    condition_number,
+    scalar_diffusivity,
+    symmetric_parts,
+)
+from learnclosure.errors import DiagnosisError
+from learnclosure.study import DiagnosisSettings
+
+FloatArray = npt.NDArray[np.float64]
+
+PAIRS = tuple(
+    (a, b, f"{row}{column}") for a, row in enumerate("xy") for b, column in enumerate("xy")
+)
+
+
+def diagnose(
+    ensemble: EnsembleSource,
+    settings: DiagnosisSettings | None = None,
+    *,
+    progress: Callable[[float, str], None] | None = None,
+) -> xr.Dataset:
+    """Diagnose eddy statistics and the transport tensor of one region.
+
+    Parameters
+    ----------
+    ensemble : EnsembleSource
+        An open ensemble.
+    settings : DiagnosisSettings, optional
+    progress : callable, optional
+        Called with the share done and a note.
+
+    Returns
+    -------
+    xarray.Dataset
+        Contents of ``statistics.nc``: mean state, eddy fluxes, gradients, transport
+        tensor with its error, reliability and skill on withheld tracers.
+
+    Raises
+    ------
+    DiagnosisError
+        If members or tracers cannot determine a tensor.
+    """
+    chosen = settings or DiagnosisSettings()
+    _check_tracers(ensemble)
+    report = progress or (lambda _share, _note: None)
+    coarsening = Coarsening(ensemble.grid, chosen.coarsen)
+    geometry = coarsening.geometry
+    area = geometry.area * coarsening.wet_share
+    moments = accumulate_moments(
+        ensemble, coarsening, progress=lambda share: report(0.7 * share, "moments")
+    )
+    inversion = SmoothInversion(geometry, area, chosen, len(ensemble.tracers))
+    estimator = Estimator(geometry, area, inversion, ensemble.tracers)
+    whole = estimator.group(moments.whole)
+    halves = tuple(estimator.group(half) for half in moments.halves)
+    valid = estimator.determined(whole.equations)
+    _check_determined(ensemble, whole, valid)
+    report(0.8, "jackknife")
+    error = estimator.standard_error(moments)
+    report(0.95, "skill")
+    skill = estimator.withheld_skill(whole, ensemble.withheld_tracers, valid)
+
+    builder = StatisticsBuilder(coarsening.x, coarsening.y, len(geometry.mask))
+    _add_mean_state(builder, ensemble, coarsening, moments)
+    _add_tracers(builder, ensemble, whole, halves, moments)
+    _add_tensor(builder, estimator, whole, valid, error)
+    _add_quality(builder, ensemble, estimator, whole, halves, valid)
+    _add_skill(builder, skill)
+    report(1.0, "done")
+    return builder.build(_attributes(ensemble, chosen, inversion, skill))
+
+
+def _check_tracers(ensemble: EnsembleSource) -> None:
+    if len(ensemble.tracers) < 2:
+        raise DiagnosisError(
+            "a transport tensor needs two tracers with different gradients",
+            where=f"region '{ensemble.name}'",
+            found=f"{len(ensemble.tracers)} ({', '.join(ensemble.tracers) or 'none'})",
+            expected="at least two tracers that are not withheld",
+            remedy="name them under [ensemble.variables] tracers",
+        )
+
+
+def _check_determined(
+    ensemble: EnsembleSource, whole: GroupEstimate, valid: npt.NDArray[np.bool_]
+) -> None:
+    if valid.any():
+        return
+    typical = float(np.median(condition_number(whole.equations.M)))
+    raise DiagnosisError(
+        "the mean tracer gradients are parallel or vanish everywhere",
+        where=f"region '{ensemble.name}': {', '.join(ensemble.tracers)}",
+        found=f"a median condition number of {typical:.3g}",
+        expected="tracers whose mean gradients point in different directions",
+        remedy="use tracers that differ, along x as well as along y",
+    )
+
+
+def _tensor_components(tensor: FloatArray) -> dict[str, FloatArray]:
+    return {name: tensor[..., a, b] for a, b, name in PAIRS}
+
+
+def _add_mean_state(
+    builder: StatisticsBuilder,
+    ensemble: EnsembleSource,
+    coarsening: Coarsening,
+    moments: Moments,
+) -> None:
+    grid, geometry = ensemble.grid, coarsening.geometry
+    mean = moments.whole.mean
+    if grid.reduced_gravity is not None:
+        gravity = coarsening.surface_mean(grid.reduced_gravity)
+    elif ensemble.has_buoyancy:
+        gravity = mean["buoyancy"][:-1] - mean["buoyancy"][1:]
+    elif len(geometry.mask) == 1:
+        gravity = np.zeros((0, *geometry.mask.shape[1:]))
+    else:
+        raise DiagnosisError(
+            "the stratification is unknown",
+            where=f"region '{ensemble.name}'",
+            expected="buoyancy, temperature or reduced gravity",
+            remedy="name one under [ensemble.variables] or [ensemble.grid]",
+        )
+    both = geometry.mask[:-1] & geometry.mask[1:]
+    fields: dict[str, FloatArray] = {
+        "x_velocity": mean["x_velocity"],
+        "y_velocity": mean["y_velocity"],
+        "layer_thickness": coarsening.mean(grid.layer_thickness),
+        "reduced_gravity": np.where(both, gravity, 0.0),
+        "coriolis_parameter": coarsening.surface_mean(grid.coriolis_parameter),
+        "planetary_beta_x": coarsening.surface_mean(grid.planetary_beta_x),
+        "planetary_beta_y": coarsening.surface_mean(grid.planetary_beta_y),
+        "sea_floor_depth": coarsening.mean(np.broadcast_to(grid.sea_floor_depth, grid.shape)).max(
+            axis=0
+        ),
+        "cell_width_x": geometry.dx,
+        "cell_width_y": geometry.dy,
+        "wet_share": coarsening.wet_share,
+        "eddy_kinetic_energy": moments.whole.eddy_kinetic_energy,
+    }
+    for name, values in fields.items():
+        builder.add_named(name, np.ascontiguousarray(values))
+    if moments.halves:
+        builder.add_named(
+            "eddy_kinetic_energy",
+            np.stack([half.eddy_kinetic_energy for half in moments.halves]),
+            "_halves",
+            "of each half of the members,",
+        )
+
+
+def _add_tracers(
+    builder: StatisticsBuilder,
+    ensemble: EnsembleSource,
+    whole: GroupEstimate,
+    halves: tuple[GroupEstimate, ...],
+    moments: Moments,
+) -> None:
+    for name in (*ensemble.tracers, *ensemble.withheld_tracers):
+        units = ensemble.units.get(name, "1")
+        builder.add(
+            f"{name}_mean", moments.whole.mean[name], ("layer", "y", "x"),
+            f"ensemble and time mean of {name}", units,
+        )  # fmt: skip
+        builder.add_tracer(name, units, whole.flux[name], whole.gradient[name])
+        if halves:
+            builder.add_tracer(
+                name,
+                units,
+                np.stack([half.flux[name] for half in halves]),
+                np.stack([half.gradient[name] for half in halves]),
+                halves=True,
+            )
+
+
+def _add_tensor(
+    builder: StatisticsBuilder,
+    estimator: Estimator,
+    whole: GroupEstimate,
+    valid: npt.NDArray[np.bool_],
+    error: FloatArray | None,
+) -> None:
+    wet = estimator.geometry.mask
+
+    def known(values: FloatArray) -> FloatArray:
+        return np.where(wet, values, np.nan)
+
+    for name, values in _tensor_components(whole.smooth.tensor).items():
+        builder.add_named(f"transport_tensor_{name}", known(values))
+    for name, values in _tensor_components(whole.least_squares).items():
+        builder.add_named(f"least_squares_tensor_{name}", known(values))
+    if error is not None:
+        for name, values in _tensor_components(error).items():
+            builder.add_named(
+                f"transport_tensor_{name}", known(values), "_standard_error",
+                "standard error by leaving one member out, of the",
+            )  # fmt: skip
+    xx, xy, yy, alpha = symmetric_parts(whole.smooth.tensor)
+    for name, values in (("xx", xx), ("xy", xy), ("yy", yy)):
+        builder.add_named(f"symmetric_tensor_{name}", known(values))
+    builder.add_named("antisymmetric_tensor", known(alpha))
+    builder.add_named("scalar_diffusivity", known(scalar_diffusivity(whole.equations)))
+    condition = condition_number(whole.equations.M)
+    builder.add_named(
+        "condition_number", known(np.where(np.isfinite(condition), condition, np.nan))
+    )
+    builder.add_named("valid", valid.astype(np.int8))
+    builder.add(
+        "floor_active", whole.smooth.floored.astype(np.int8), ("layer", "y", "x"),
+        "1 where the floor holds up an eigenvalue of the symmetric part", "1",
+    )  # fmt: skip
+
+
+def _add_quality(
+    builder: StatisticsBuilder,
+    ensemble: EnsembleSource,
+    estimator: Estimator,
+    whole: GroupEstimate,
+    halves: tuple[GroupEstimate, ...],
+    valid: npt.NDArray[np.bool_],
+) -> None:
+    for name, values in estimator.leverages(whole, ensemble.withheld_tracers).items():
+        builder.add(
+            f"leverage_{name}", values, ("layer", "y", "x"),
+            f"leverage of the mean gradient of {name} in the inversion", "1",
+        )  # fmt: skip
+    if not halves:
+        return
+    for a, b, name in PAIRS:
+        builder.add_named(
+            f"transport_tensor_{name}",
+            np.where(
+                estimator.geometry.mask,
+                np.stack([half.smooth.tensor[..., a, b] for half in halves]),
+                np.nan,
+            ),
+            "_halves",
+            "of each half of the members,",
+        )
+    reliability = estimator.component_reliability(halves, valid)
+    for a, b, name in PAIRS:
+        builder.add(
+            f"reliability_transport_tensor_{name}", reliability[a, b], ("layer",),
+            f"split-half reliability of the {name} component of the transport tensor", "1",
+            references="Spearman 1910 and Brown 1910, British Journal of Psychology 3",
+        )  # fmt: skip
+    builder.add(
+        "reliability_flux", estimator.flux_reliability(halves, valid), ("layer",),
+        "split-half reliability of the eddy fluxes, mean over tracers", "1",
+    )  # fmt: skip
+
+
+def _add_skill(builder: StatisticsBuilder, skill: WithheldSkill | None) -> None:
+    if skill is None:
+        return
+    builder.coordinates["withheld_tracer"] = xr.Variable(
+        ("withheld",), np.array(skill.tracers, dtype=object), {"long_name": "tracer left out"}
+    )
+    columns = {
+        "withheld_flux_skill": (skill.flux, "eddy fluxes", "the transport tensor"),
+        "withheld_divergence_skill": (
+            skill.divergence, "flux divergences", "the transport tensor",
+        ),
+        "least_squares_withheld_flux_skill": (
+            skill.least_squares_flux, "eddy fluxes", "plain least squares",
+        ),
+        "least_squares_withheld_divergence_skill": (
+            skill.least_squares_divergence, "flux divergences", "plain least squares",
+        ),
+    }  # fmt: skip
+    for name, (values, what, which) in columns.items():
+        builder.add(
+            name, values, ("withheld", "layer"),
+            f"coefficient of determination of {what} of tracers left out, by {which}", "1",
+        )  # fmt: skip
+
+
+def _attributes(
+    ensemble: EnsembleSource,
+    settings: DiagnosisSettings,
+    inversion: SmoothInversion,
+    skill: WithheldSkill | None,
+) -> dict[str, Any]:
+    geometry = inversion.geometry
+    axes = [axis for axis in "xy" if getattr(geometry, f"periodic_{axis}")]
+    cell = "layer" if ensemble.grid.vertical == "layers" else "level"
+    attributes: dict[str, Any] = {
+        "Conventions": "CF-1.11",
+        "title": f"eddy statistics and transport tensor of the region {ensemble.name}",
+        "source": f"learnclosure {__version__}",
+        "references": "Plumb and Mahlman 1987, J. Atmos. Sci. 44, 298-327",
+        "region": ensemble.name,
+        "split": ensemble.split,
+        "eddy_definition": (
+            f"departure from the ensemble mean of the same time; Reynolds average in each {cell}"
+        ),
+        "members": np.int32(len(ensemble.member_labels)),
+        "snapshots": np.int32(len(ensemble.times)),
+        "vertical": ensemble.grid.vertical,
+        "periodic": " ".join(axes),
+        "tracers": " ".join(ensemble.tracers),
+        "withheld_tracers": " ".join(ensemble.withheld_tracers),
+        "tensor_convention": "J = -K grad C, rows flux, columns gradient; alpha = (Kyx - Kxy)/2",
+        "coarsening_factor": np.int32(settings.coarsen),
+        "smoothing_length_m": settings.smoothing_length,
+        "floor_m2_s_1": settings.floor,
+        "floor_method": settings.floor_method,
+        "scalar_pull": inversion.pull,
+        "assumptions": "; ".join(ensemble.assumptions),
+    }
+    if skill is not None:
+        attributes["withheld_method"] = (
+            "tracers declared as withheld"
+            if ensemble.withheld_tracers
+            else "no tracer is withheld; each in turn was left out of a fit of its own"
+        )
+    digest = getattr(ensemble, "input_sha256", None)
+    if digest is not None:
+        attributes["input_sha256"] = digest
+    return attributes

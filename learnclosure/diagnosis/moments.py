@@ -1,0 +1,251 @@
+"""Ensemble means, eddy fluxes and what their sampling error needs, in one pass over time."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import Protocol
+
+import numpy as np
+import numpy.typing as npt
+
+from learnclosure.diagnosis.coarse import Coarsening
+from learnclosure.ensemble.grid import Grid
+from learnclosure.errors import DiagnosisError
+
+FloatArray = npt.NDArray[np.float64]
+IndexArray = npt.NDArray[np.int64]
+
+LEAST_MEMBERS_FOR_HALVES = 4
+
+
+class EnsembleSource(Protocol):
+    """What the diagnosis asks of an ensemble; ``learnclosure.Ensemble`` offers it."""
+
+    name: str
+    split: str
+    grid: Grid
+    member_labels: tuple[int | str, ...]
+    times: FloatArray
+    tracers: tuple[str, ...]
+    withheld_tracers: tuple[str, ...]
+    units: dict[str, str]
+    has_buoyancy: bool
+    assumptions: tuple[str, ...]
+
+    def fields(self, time: int) -> dict[str, FloatArray]:
+        """Return all fields of one time, shape (member, layer, y, x)."""
+        ...
+
+
+@dataclass(frozen=True)
+class GroupMoments:
+    """Mean state and eddy fluxes of one group of members on the coarse grid.
+
+    Attributes
+    ----------
+    mean : dict of str to ndarray, shape (layer, y, x)
+        Ensemble and time means of velocities, tracers and buoyancy.
+    flux : dict of str to ndarray, shape (2, layer, y, x)
+        Time mean of the unbiased (N - 1) covariance of velocity and each tracer.
+    eddy_kinetic_energy : ndarray, shape (layer, y, x), m2 s-2
+        From unbiased variances.
+    """
+
+    mean: dict[str, FloatArray]
+    flux: dict[str, FloatArray]
+    eddy_kinetic_energy: FloatArray
+
+
+@dataclass(frozen=True)
+class Moments:
+    """Moments of all members, of two halves and, in closed form, without each member.
+
+    Attributes
+    ----------
+    whole : GroupMoments
+        Of all members.
+    halves : tuple of GroupMoments
+        Of every other member, two groups; empty with fewer than four members.
+    member_mean : dict of str to ndarray, shape (member, layer, y, x)
+        Time mean of each tracer of each member.
+    member_product : dict of str to ndarray, shape (member, 2, layer, y, x)
+        Time mean of each member's product of departures from the ensemble mean.
+    """
+
+    whole: GroupMoments
+    halves: tuple[GroupMoments, ...]
+    member_mean: dict[str, FloatArray]
+    member_product: dict[str, FloatArray]
+
+    def without_member(self, member: int) -> tuple[dict[str, FloatArray], dict[str, FloatArray]]:
+        """Tracer means and eddy fluxes of the ensemble without one member.
+
+        Removing member i from a sum of N products of departures takes
+        ``N/(N-1) d_i e_i`` away, which holds exactly since the mean moves with it.
+
+        Parameters
+        ----------
+        member : int
+
+        Returns
+        -------
+        mean : dict of str to ndarray, shape (layer, y, x)
+        flux : dict of str to ndarray, shape (2, layer, y, x)
+        """
+        mean, flux = {}, {}
+        for tracer, product in self.member_product.items():
+            count = len(product)
+            rest = product.sum(axis=0) - count / (count - 1) * product[member]
+            flux[tracer] = rest / (count - 2)
+            values = self.member_mean[tracer]
+            mean[tracer] = (values.sum(axis=0) - values[member]) / (count - 1)
+        return mean, flux
+
+
+class _Group:
+    """Running sums over time of one group of members."""
+
+    def __init__(self, members: IndexArray) -> None:
+        self.members = members
+        self.mean: dict[str, FloatArray] = {}
+        self.flux: dict[str, FloatArray] = {}
+        self.energy: FloatArray | None = None
+
+    def add_mean(self, name: str, coarse: FloatArray) -> None:
+        value = coarse[self.members].mean(axis=0)
+        self.mean[name] = self.mean[name] + value if name in self.mean else value
+
+    def add_flux(self, name: str, summed: FloatArray) -> None:
+        value = summed / (len(self.members) - 1)
+        self.flux[name] = self.flux[name] + value if name in self.flux else value
+
+    def add_energy(self, summed: FloatArray) -> None:
+        value = summed / (len(self.members) - 1)
+        self.energy = value if self.energy is None else self.energy + value
+
+    def finish(self, times: int) -> GroupMoments:
+        assert self.energy is not None
+        return GroupMoments(
+            mean={name: total / times for name, total in self.mean.items()},
+            flux={name: total / times for name, total in self.flux.items()},
+            eddy_kinetic_energy=self.energy / times,
+        )
+
+
+class _Snapshot:
+    """Departures of one time and the coarse sums of their products over groups."""
+
+    def __init__(self, fields: dict[str, FloatArray], coarsening: Coarsening) -> None:
+        self.coarsening = coarsening
+        self.departure = {
+            name: values - values.mean(axis=0)
+            for name, values in fields.items()
+            if name != "buoyancy"
+        }
+
+    def products(self, first: str, second: str) -> FloatArray:
+        """Coarse products of each member's departures, shape (member, layer, y, x)."""
+        return self.coarsening.mean(self.departure[first] * self.departure[second])
+
+    def group_sum(
+        self, products: FloatArray, first: str, second: str, members: IndexArray
+    ) -> FloatArray:
+        """Sum over a group of products of departures from the group's own mean."""
+        shift = self.departure[first][members].mean(axis=0) * (
+            self.departure[second][members].mean(axis=0)
+        )
+        return np.asarray(
+            products[members].sum(axis=0) - len(members) * self.coarsening.mean(shift)
+        )
+
+
+def _check_members(source: EnsembleSource) -> int:
+    count = len(source.member_labels)
+    if count < 2:
+        raise DiagnosisError(
+            "one member has no eddies about an ensemble mean",
+            where=f"region '{source.name}'",
+            found="one member",
+            expected="at least 2 members",
+            remedy="add members to 'files'",
+        )
+    return count
+
+
+def accumulate_moments(
+    source: EnsembleSource,
+    coarsening: Coarsening,
+    *,
+    progress: Callable[[float], None] | None = None,
+) -> Moments:
+    """Accumulate means and eddy fluxes over all times of an ensemble.
+
+    Departures are taken from the ensemble mean of the same time at full resolution;
+    their products are averaged over blocks, divided by N - 1 and averaged over time.
+    One time is in memory at once.
+
+    Parameters
+    ----------
+    source : EnsembleSource
+    coarsening : Coarsening
+    progress : callable, optional
+        Called with the share done.
+
+    Returns
+    -------
+    Moments
+
+    Raises
+    ------
+    DiagnosisError
+        If there are fewer than two members.
+    """
+    count = _check_members(source)
+    everyone = np.arange(count)
+    whole = _Group(everyone)
+    halves: list[_Group] = []
+    if count >= LEAST_MEMBERS_FOR_HALVES:
+        halves = [_Group(everyone[0::2]), _Group(everyone[1::2])]
+    names = (*source.tracers, *source.withheld_tracers)
+    member_mean: dict[str, FloatArray] = {}
+    member_product: dict[str, FloatArray] = {}
+    times = len(source.times)
+    for time in range(times):
+        fields = source.fields(time)
+        for name, values in fields.items():
+            coarse = coarsening.mean(values)
+            for group in (whole, *halves):
+                group.add_mean(name, coarse)
+            if name in names:
+                known = member_mean.get(name)
+                member_mean[name] = coarse if known is None else known + coarse
+        snapshot = _Snapshot(fields, coarsening)
+        energy = [snapshot.products(axis, axis) for axis in ("x_velocity", "y_velocity")]
+        whole.add_energy(0.5 * (energy[0] + energy[1]).sum(axis=0))
+        for half in halves:
+            parts = [
+                snapshot.group_sum(products, axis, axis, half.members)
+                for axis, products in zip(("x_velocity", "y_velocity"), energy, strict=True)
+            ]
+            half.add_energy(0.5 * (parts[0] + parts[1]))
+        for name in names:
+            pairs = [snapshot.products(axis, name) for axis in ("x_velocity", "y_velocity")]
+            both = np.stack(pairs, axis=1)
+            known = member_product.get(name)
+            member_product[name] = both if known is None else known + both
+            whole.add_flux(name, both.sum(axis=0))
+            for half in halves:
+                parts = [
+                    snapshot.group_sum(products, axis, name, half.members)
+                    for axis, products in zip(("x_velocity", "y_velocity"), pairs, strict=True)
+                ]
+                half.add_flux(name, np.stack(parts))
+        if progress is not None:
+            progress((time + 1) / times)
+    return Moments(
+        whole=whole.finish(times),
+        halves=tuple(half.finish(times) for half in halves),
+        member_mean={name: total / times for name, total in member_mean.items()},
+        member_product={name: total / times for name, total in member_product.items()},
+    )
