@@ -189,11 +189,11 @@ class PerceptronRegressor(MultiOutputRegressor):
 
     Parameters
     ----------
-    hidden_layers : tuple of int, default (48, 48)
-    penalty : float, default 1e-2
+    hidden_layers : tuple of int, default (32, 32)
+    penalty : float, default 10.0
         Penalty on the squared weights.
-    learning_rate : float, default 2e-3
-    epochs : int, default 60
+    learning_rate : float, default 5e-3
+    epochs : int, default 25
         Passes over the sample; fixed, so that no part of a region serves to stop training.
     batch : int, default 256
         Points per step.
@@ -218,10 +218,10 @@ class PerceptronRegressor(MultiOutputRegressor):
 
     def __init__(
         self,
-        hidden_layers: tuple[int, ...] = (48, 48),
-        penalty: float = 1e-2,
-        learning_rate: float = 2e-3,
-        epochs: int = 60,
+        hidden_layers: tuple[int, ...] = (32, 32),
+        penalty: float = 10.0,
+        learning_rate: float = 5e-3,
+        epochs: int = 25,
         batch: int = 256,
         random_state: int = 0,
     ) -> None:

@@ -8,7 +8,7 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping, Sequence
 from dataclasses import asdict, dataclass
-from typing import Any, Protocol
+from typing import Any, NamedTuple, Protocol
 
 import numpy as np
 import numpy.typing as npt
@@ -40,6 +40,20 @@ EXEMPT = 1e-3
 """Share of points a symmetry check may leave out: a tree's threshold may lie within
 rounding of a value."""
 TRACERS = 8
+
+
+class Answer(NamedTuple):
+    """What a closure says of some points, as plain arrays.
+
+    Attributes
+    ----------
+    tensor, half_width : ndarray, shape (point, 4), m2 s-1
+    trust : ndarray, shape (point,), 1
+    """
+
+    tensor: FloatArray
+    half_width: FloatArray
+    trust: FloatArray
 
 
 class Predicts(Protocol):
@@ -95,6 +109,23 @@ def eigenvalues(tensor: FloatArray) -> tuple[FloatArray, FloatArray]:
     return values[:, 0], values[:, 1]
 
 
+def _answer(closure: Predicts, inputs: Inputs) -> Answer:
+    """Ask a closure; where its regressor refuses what is not finite, nothing is known."""
+    # Overflow and the like are provoked on purpose; the checks look at what comes out.
+    with np.errstate(all="ignore"):
+        try:
+            given = closure.predict(dict(inputs))
+        except ValueError:
+            count = len(next(iter(inputs.values())))
+            unknown = np.full((count, 4), np.nan)
+            return Answer(unknown, unknown, unknown[:, 0])
+    return Answer(
+        np.asarray(given.tensor, dtype=np.float64),
+        np.asarray(given.half_width, dtype=np.float64),
+        np.asarray(given.trust, dtype=np.float64),
+    )
+
+
 def _bounds(tensor: FloatArray, floor: float, cap: float) -> list[AuditCheck]:
     lowest, highest = eigenvalues(tensor)
     alpha = 0.5 * np.abs(tensor[:, 2] - tensor[:, 1])
@@ -120,10 +151,10 @@ def _bounds(tensor: FloatArray, floor: float, cap: float) -> list[AuditCheck]:
 def _deviation(
     closure: Predicts, sample: Inputs, table: Mapping[str, Quantity], matrices: Sequence[Matrix]
 ) -> FloatArray:
-    original = np.asarray(closure.predict(dict(sample)).tensor)
+    original = _answer(closure, sample).tensor
     size = np.maximum(np.linalg.norm(original, axis=1), np.finfo(np.float64).tiny)
     moved = join_inputs([transform_inputs(sample, matrix, table) for matrix in matrices])
-    answers = np.split(np.asarray(closure.predict(moved).tensor), len(matrices))
+    answers = np.split(_answer(closure, moved).tensor, len(matrices))
     return np.stack(
         [
             np.abs(answer - transform_tensor(original, matrix)).max(axis=1) / size
@@ -189,13 +220,11 @@ def _stability(fields: Sequence[tuple[AuditRegion, FloatArray]], cap: float) -> 
     )
 
 
-def _good_behaviour(answers: Sequence[Any]) -> list[AuditCheck]:
-    trust = np.concatenate([np.asarray(answer.trust) for answer in answers])
+def _good_behaviour(answers: Sequence[Answer]) -> list[AuditCheck]:
+    trust = np.concatenate([answer.trust for answer in answers])
     outside = int((~((trust >= 0.0) & (trust <= 1.0))).sum())
-    broken = sum(
-        int((~np.isfinite(np.asarray(answer.tensor)).all(axis=1)).sum()) for answer in answers
-    )
-    widths = np.concatenate([np.asarray(answer.half_width) for answer in answers])
+    broken = sum(int((~np.isfinite(answer.tensor)).any(axis=1).sum()) for answer in answers)
+    widths = np.concatenate([answer.half_width for answer in answers])
     wrong = int((~(widths >= 0.0)).any(axis=1).sum())
     return [
         AuditCheck(
@@ -243,15 +272,15 @@ def audit(
     list of AuditCheck
     """
     sample = sample_inputs(regions, seed)
-    # Rounding limits are meant to be reached here; the checks look at what comes out.
-    with np.errstate(over="ignore", under="ignore"):
-        wild = closure.predict(extreme_inputs(sample, seed, table))
-        answers = [closure.predict(dict(region.inputs)) for region in regions]
-        lacking = closure.predict(degenerate_inputs(sample))
-    everything = [*answers, wild, lacking]
-    tensor = np.concatenate([np.asarray(answer.tensor) for answer in everything])
+    answers = [_answer(closure, region.inputs) for region in regions]
+    everything = [
+        *answers,
+        _answer(closure, extreme_inputs(sample, seed, table)),
+        _answer(closure, degenerate_inputs(sample)),
+    ]
+    tensor = np.concatenate([answer.tensor for answer in everything])
     fields = [
-        (region, np.nan_to_num(region.on_grid(np.asarray(answer.tensor))))
+        (region, np.nan_to_num(region.on_grid(answer.tensor)))
         for region, answer in zip(regions, answers, strict=True)
     ]
     angles = [rotation(angle) for angle in ANGLES]

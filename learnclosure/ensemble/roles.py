@@ -1,0 +1,167 @@
+"""Which variable plays which part, from the study or from CF attributes."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from dataclasses import dataclass
+
+import xarray as xr
+
+from learnclosure.errors import DiagnosisError, RoleError
+from learnclosure.study import EnsembleTable
+
+STANDARD_NAMES = {
+    "x_velocity": ("sea_water_x_velocity", "eastward_sea_water_velocity"),
+    "y_velocity": ("sea_water_y_velocity", "northward_sea_water_velocity"),
+}
+LEAST_TRACERS = 2
+
+
+@dataclass(frozen=True)
+class Roles:
+    """Names of the variables that play a part.
+
+    Attributes
+    ----------
+    x_velocity, y_velocity : str
+    tracers, withheld_tracers : tuple of str
+    buoyancy, temperature, salinity : str or None
+        For the stratification, where it is not fixed in time.
+    """
+
+    x_velocity: str
+    y_velocity: str
+    tracers: tuple[str, ...]
+    withheld_tracers: tuple[str, ...]
+    buoyancy: str | None
+    temperature: str | None
+    salinity: str | None
+
+
+def _fields(dataset: xr.Dataset) -> list[str]:
+    """Names of variables that may be a velocity or a tracer: three dimensions or more."""
+    return [
+        str(name)
+        for name, variable in dataset.data_vars.items()
+        if variable.ndim >= 3 and variable.dtype.kind == "f"
+    ]
+
+
+def _listed(names: Iterable[str]) -> str:
+    return ", ".join(names) or "none"
+
+
+def require_variable(dataset: xr.Dataset, name: str, part: str, where: object) -> str:
+    """Return a variable's name if the dataset has it.
+
+    Parameters
+    ----------
+    dataset : xarray.Dataset
+    name : str
+    part : str
+        The study key that names it.
+    where : object
+        File, for the message.
+
+    Returns
+    -------
+    str
+
+    Raises
+    ------
+    RoleError
+        If the dataset has no such variable; the message lists those it has.
+    """
+    if name in dataset.variables:
+        return name
+    raise RoleError(
+        f"the variable named by '{part}' is missing",
+        where=f"{where}: {name}",
+        found=_listed(str(other) for other in dataset.variables),
+        expected=name,
+        remedy=f"correct '{part}' in the study",
+    )
+
+
+def _velocity(dataset: xr.Dataset, part: str, named: str | None, where: object) -> str:
+    if named is not None:
+        return require_variable(dataset, named, part, where)
+    found = [
+        name
+        for name in _fields(dataset)
+        if dataset[name].attrs.get("standard_name") in STANDARD_NAMES[part]
+    ]
+    if len(found) == 1:
+        return found[0]
+    raise RoleError(
+        f"no variable is known to be '{part}'" if not found else f"several may be '{part}'",
+        where=where,
+        found=_listed(found or _fields(dataset)),
+        expected=f"one with the standard_name {' or '.join(STANDARD_NAMES[part])}",
+        remedy=f"name it under [ensemble.variables] {part}",
+    )
+
+
+def find_roles(table: EnsembleTable, dataset: xr.Dataset, where: object) -> Roles:
+    """Find the variables of one member that the diagnosis needs.
+
+    Parameters
+    ----------
+    table : EnsembleTable
+    dataset : xarray.Dataset
+        The first member.
+    where : object
+        Its file, for messages.
+
+    Returns
+    -------
+    Roles
+
+    Raises
+    ------
+    RoleError
+        If a velocity or a named variable is missing.
+    DiagnosisError
+        If fewer than two tracers are left for the inversion.
+    """
+    names = table.variables
+    x_velocity = _velocity(dataset, "x_velocity", names.x_velocity, where)
+    y_velocity = _velocity(dataset, "y_velocity", names.y_velocity, where)
+    if names.tracers is None:
+        tracers = _with_tracer_role(dataset, "inversion")
+        withheld = names.withheld_tracers or _with_tracer_role(dataset, "withheld")
+    else:
+        tracers, withheld = names.tracers, names.withheld_tracers
+    for part, listed in (("tracers", tracers), ("withheld_tracers", withheld)):
+        for name in listed:
+            require_variable(dataset, name, f"[ensemble.variables] {part}", where)
+    both = sorted(set(tracers) & set(withheld))
+    if both:
+        raise RoleError(
+            "a tracer is both used and withheld",
+            where=f"{where}: {both[0]}",
+            remedy="name it under 'tracers' or under 'withheld_tracers'",
+        )
+    if len(tracers) < LEAST_TRACERS:
+        others = [name for name in _fields(dataset) if name not in (x_velocity, y_velocity)]
+        raise DiagnosisError(
+            "a transport tensor needs at least two tracers",
+            where=where,
+            found=f"{len(tracers)} ({_listed(tracers)})",
+            expected=f"two or more of {_listed(others)}",
+            remedy="name them under [ensemble.variables] tracers",
+        )
+    optional = {}
+    for part in ("buoyancy", "temperature", "salinity"):
+        named = getattr(names, part)
+        if named is not None:
+            require_variable(dataset, named, f"[ensemble.variables] {part}", where)
+        optional[part] = named
+    return Roles(x_velocity, y_velocity, tuple(tracers), tuple(withheld), **optional)
+
+
+def _with_tracer_role(dataset: xr.Dataset, role: str) -> tuple[str, ...]:
+    """Names of variables whose attribute ``tracer_role`` says what they serve for."""
+    return tuple(
+        name for name in _fields(dataset) if dataset[name].attrs.get("tracer_role") == role
+    )
