@@ -100,4 +100,26 @@ def readiness_listing(readiness: Readiness) -> list[RenderableType]:
     -------
     list of renderables
     """
-    raise AssertionError(readiness)
+    parts: list[RenderableType] = []
+    facts = _table(f"ensemble '{readiness.name}'", "topic", "understood")
+    facts.add_row("files", f"{len(readiness.files)}")
+    for topic, text in readiness.facts.items():
+        facts.add_row(topic, text)
+    for note in readiness.assumptions:
+        facts.add_row("assumed", note)
+    for note in readiness.missing:
+        facts.add_row("missing", note)
+    for note in readiness.problems:
+        facts.add_row("problem", note)
+    parts.append(facts)
+    if readiness.roles:
+        roles = _table("", "part", "variable", "units in the files", "units read", "sits at")
+        for line in readiness.roles:
+            roles.add_row(line.part, line.variable, line.units_before, line.units_after, line.place)
+        parts.append(roles)
+    elif readiness.variables:
+        found = _table("", "variables of the first file")
+        for text in readiness.variables:
+            found.add_row(text)
+        parts.append(found)
+    return parts

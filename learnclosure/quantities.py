@@ -22,7 +22,7 @@ from typing import Literal
 
 Parity = Literal["scalar", "pseudo-scalar", "vector", "pseudo-vector", "tensor"]
 Locality = Literal["point", "stencil 1", "stencil 2", "column", "along-jet", "domain"]
-Group = Literal["role", "mean state", "statistic", "input", "feature"]
+Group = Literal["role", "mean state", "statistic", "input", "feature", "output"]
 
 LAYER_FIELD = ("layer", "y", "x")
 SURFACE_FIELD = ("y", "x")
@@ -426,3 +426,29 @@ FEATURES: dict[str, Quantity] = _rows(
 TENSOR_COMPONENTS: tuple[str, ...] = tuple(
     f"transport_tensor_{row}{column}" for row in "xy" for column in "xy"
 )
+
+OUTPUTS: dict[str, Quantity] = _rows(
+    "output",
+    [
+        *(
+            Quantity(
+                name, STATISTICS[name].symbol, "m2 s-1", STATISTICS[name].long_name, "output",
+                parity="tensor", source=STATISTICS[name].source,
+            )
+            for name in TENSOR_COMPONENTS
+        ),
+        *(
+            Quantity(
+                f"half_width_{row}{column}", f"hK{row}{column}", "m2 s-1",
+                f"half-width of the interval about the transport tensor, component {row}{column}",
+                "output", validity="1e30 or more where none was calibrated",
+            )
+            for row in "xy"
+            for column in "xy"
+        ),
+        Quantity(
+            "trust", "", "1", "1 within the range a closure was trained on, falling to 0 outside",
+            "output",
+        ),
+    ],
+)  # fmt: skip

@@ -8,7 +8,7 @@ import numpy as np
 
 from learnclosure.ensemble.grid import Geometry, Grid
 
-GRADIENTS = np.array([[1.0, 0.0], [0.3, 0.9], [-0.6, 0.7], [0.2, -1.1]]) * 1e-6
+GRADIENTS = np.array([[1.0, 0.0], [0.3, 0.9], [-0.6, 0.7], [0.2, -1.1], [0.8, 0.5]]) * 1e-6
 
 
 def box(
@@ -21,7 +21,7 @@ def box(
     mask: np.ndarray | None = None,
     periodic: tuple[bool, bool] = (False, False),
 ) -> Grid:
-    """A grid of equal cells, 1000 m to the layer."""
+    """Make a grid of equal cells, 1000 m to the layer."""
     wet = np.ones((layers, rows, columns), bool) if mask is None else mask
     one = np.ones((rows, columns))
     return Grid(
@@ -54,17 +54,21 @@ class MemoryEnsemble:
 
     @property
     def member_labels(self) -> tuple[int, ...]:
+        """Number the members."""
         return tuple(range(self.values["x_velocity"].shape[1]))
 
     @property
     def times(self) -> np.ndarray:
+        """Count days."""
         return np.arange(len(self.values["x_velocity"]), dtype=float)
 
     @property
     def has_buoyancy(self) -> bool:
+        """Tell whether buoyancy is among the fields."""
         return "buoyancy" in self.values
 
     def fields(self, time: int) -> dict[str, np.ndarray]:
+        """Return all fields of one time and remember that it was asked for."""
         self.asked.append(time)
         return {name: values[time] for name, values in self.values.items()}
 

@@ -52,6 +52,26 @@ def test_files_follow_the_conventions(tmp_path):
         )
 
 
+def test_public_compliance_checker_finds_no_error(tmp_path):
+    from compliance_checker.cf.cf_1_11 import CF1_11Check
+    from compliance_checker.suite import CheckSuite
+
+    folder = simulate_channel(small_regime(), tmp_path, **{**SHORT, "members": 1})
+    suite = CheckSuite()
+    suite.checkers = {"cf:1.11": CF1_11Check}
+    dataset = suite.load_dataset(str(folder / "member_00.nc"))
+    results, failures = suite.run_all(dataset, ["cf:1.11"])["cf:1.11"]
+    assert not failures
+    errors = [
+        message
+        for result in results
+        if result.weight == 3 and result.value[0] < result.value[1]
+        for message in result.msgs
+    ]
+    assert errors == []
+    assert len(results) > 50
+
+
 def test_members_differ_and_hold_finite_fields(tmp_path):
     members = read_members(simulate_channel(small_regime(), tmp_path, **SHORT))
     assert all(np.isfinite(values).all() for values in members.values())
@@ -125,11 +145,10 @@ def test_regions_side_by_side_equal_regions_alone_and_report_progress(tmp_path):
     def progress(region, share, note):
         shares.setdefault(region, []).append(share)
 
-    counts = {"members": 1, "snapshots": 1}
-    written = simulate_regions(regimes, tmp_path / "both", **counts, workers=2, progress=progress)
+    written = simulate_regions(regimes, tmp_path / "both", **SHORT, workers=2, progress=progress)
     assert [path.name for path in written] == ["sedge", "tansy"]
     assert all(steps == sorted(steps) and steps[-1] == 1.0 for steps in shares.values())
-    alone = simulate_channel(regimes[1], tmp_path / "alone", **counts)
+    alone = simulate_channel(regimes[1], tmp_path / "alone", **SHORT)
     name = "member_00.nc"
     assert (written[1] / name).read_bytes() == (alone / name).read_bytes()
 

@@ -123,8 +123,8 @@ def test_too_fast_a_flow_is_refused_by_name_day_and_number():
     channel = started(small_regime(time_step=43200.0))
     with pytest.raises(
         SimulationError,
-        match=r"^sedge: day 0: .* too fast .* = [01]\.\d+, expected at most 0\.4\); use a time step "
-        r"shorter than 43200 s",
+        match=r"^sedge: day 0: .* too fast .* = [01]\.\d+, expected at most 0\.4\); "
+        r"use a time step shorter than 43200 s",
     ):
         channel.check()
 

@@ -11,12 +11,11 @@ import numpy.typing as npt
 
 from learnclosure.diagnosis.coarse import Coarsening
 from learnclosure.ensemble.grid import Grid
+from learnclosure.ensemble.sources import LEAST_MEMBERS_FOR_HALVES
 from learnclosure.errors import DiagnosisError
 
 FloatArray = npt.NDArray[np.float64]
 IndexArray = npt.NDArray[np.int64]
-
-LEAST_MEMBERS_FOR_HALVES = 4
 
 
 class EnsembleSource(Protocol):

@@ -6,6 +6,7 @@ from contextlib import ExitStack
 from functools import cached_property
 from pathlib import Path
 from types import TracebackType
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -25,6 +26,7 @@ FloatArray = npt.NDArray[np.float64]
 BoolArray = npt.NDArray[np.bool_]
 
 SECONDS_PER_DAY = 86400.0
+BLOCK_BYTES = 64e6
 
 
 class Ensemble:
@@ -56,6 +58,8 @@ class Ensemble:
         self._table = table
         self._folder = folder
         self._stack = ExitStack()
+        self._block: dict[tuple[int | str, str], npt.NDArray[Any]] = {}
+        self._block_start = -1
         try:
             self._open(table, folder)
         except BaseException:
@@ -189,23 +193,48 @@ class Ensemble:
 
     def _read(self, member: Member, name: str, time: int) -> FloatArray:
         """Read one field of one member, (layer, y, x), the top layer first."""
+        if self.axes.time is None:
+            values = self._load(member, name, None)
+        else:
+            start = time - time % self._block_times
+            if start != self._block_start:
+                self._block.clear()
+                self._block_start = start
+            key = (member.label, name)
+            if key not in self._block:
+                self._block[key] = self._load(member, name, slice(start, start + self._block_times))
+            values = self._block[key][time - start]
+        values = values.astype(np.float64)
+        if self.axes.layer is None:
+            values = values[None]
+        return values[::-1] if self._top_last else values
+
+    def _load(self, member: Member, name: str, times: slice | None) -> npt.NDArray[Any]:
+        """Read one variable of one member at some times, in the files' own precision."""
         variable = member.dataset.variables[name]
-        place: dict[str, int] = {}
-        if self.axes.time is not None:
-            place[self.axes.time] = time
+        place: dict[str, Any] = {}
+        if self.axes.time is not None and times is not None:
+            place[self.axes.time] = times
         if member.dimension is not None:
             place[member.dimension] = member.index
         try:
-            values = np.asarray(variable.isel(place).values, dtype=np.float64)
+            return np.asarray(variable.isel(place).values)
         except (OSError, ValueError, RuntimeError, KeyError) as error:
             raise SourceError(
                 f"cannot be read: {str(error).splitlines()[0]}",
                 where=member.where(name),
                 remedy="replace the file; it may be cut short or damaged",
             ) from None
-        if self.axes.layer is None:
-            values = values[None]
-        return values[::-1] if self._top_last else values
+
+    @cached_property
+    def _block_times(self) -> int:
+        """Times read at once: opening a variable costs more than reading a small field."""
+        variable = self.members[0].dataset[self.tracers[0]]
+        count = variable.sizes[self.axes.time] if self.axes.time is not None else 1
+        one = variable.nbytes / max(count, 1) * len(self.variable_names)
+        if self.members[0].dimension is None:
+            one *= len(self.members)
+        return int(max(1, min(count, BLOCK_BYTES // max(one, 1))))
 
     def _require_sea(self, values: FloatArray, member: Member, name: str, time: int) -> None:
         missing = int(np.count_nonzero(self.grid.geometry.mask & ~np.isfinite(values)))

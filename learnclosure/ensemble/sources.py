@@ -16,6 +16,8 @@ import xarray as xr
 from learnclosure.errors import SourceError
 from learnclosure.study import EnsembleTable
 
+LEAST_MEMBERS_FOR_HALVES = 4
+"""Each half needs two members to have eddies of its own."""
 MEMBER_NAMES = ("member", "realization", "ensemble", "number")
 MAGIC = {b"\x89HDF": "h5netcdf", b"CDF\x01": "scipy", b"CDF\x02": "scipy"}
 

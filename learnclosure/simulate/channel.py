@@ -37,6 +37,9 @@ TRACER_DAYS = 80.0
 SPACING_DAYS = 6.0
 """Days between snapshots."""
 
+TRACER_STEP_COST = 3
+"""Measured cost of a step with tracers over that of one without."""
+
 
 def _silent(region: str, share: float, note: str) -> None:
     """Report nothing."""
@@ -79,7 +82,7 @@ def _snapshot_steps(
 
 
 class _Stopwatch:
-    """Share of the work done: a step costs as much as the fields it carries."""
+    """Share of the work done; steps with tracers cost more than those without."""
 
     def __init__(self, channel: Channel, release: int, end: int, progress: Progress) -> None:
         self._channel = channel
@@ -89,7 +92,7 @@ class _Stopwatch:
         self.report()
 
     def _work(self, steps: int) -> int:
-        return min(steps, self._release) + max(steps - self._release, 0) * len(CHANNEL_WAVES) // 2
+        return min(steps, self._release) + max(steps - self._release, 0) * TRACER_STEP_COST
 
     def report(self) -> None:
         share = self._work(self._channel.steps) / max(self._work(self._end), 1)
@@ -202,6 +205,8 @@ def simulate_regions(
     members: int = 12,
     snapshots: int = 40,
     spacing_days: float = SPACING_DAYS,
+    spinup_days: float = SPINUP_DAYS,
+    tracer_days: float = TRACER_DAYS,
     seed: int = 0,
     workers: int = 2,
     progress: Progress | None = None,
@@ -214,7 +219,7 @@ def simulate_regions(
         Their names must differ.
     folder : Path
         Folder in which a folder for each region is made.
-    members, snapshots, spacing_days, seed
+    members, snapshots, spacing_days, spinup_days, tracer_days, seed
         As for `simulate_channel`.
     workers : int, optional
         Regions simulated at once; with one, no other process is started.
@@ -240,7 +245,7 @@ def simulate_regions(
     jobs = {
         regime.name: partial(
             simulate_channel, regime, folder, members=members, snapshots=snapshots,
-            spacing_days=spacing_days, seed=seed,
+            spacing_days=spacing_days, spinup_days=spinup_days, tracer_days=tracer_days, seed=seed,
         )
         for regime in regimes
     }  # fmt: skip

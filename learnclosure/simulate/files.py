@@ -162,6 +162,7 @@ class MemberFile:
         self._create(
             "time", ("time",), "f8", layout.times, standard_name="time", long_name="time",
             units="days since 2000-01-01 00:00:00", calendar="standard", axis="T",
+            units_metadata="leap_seconds: none",
         )  # fmt: skip
         self._create(
             "layer", ("layer",), "i4", np.arange(layers), standard_name="model_level_number",
@@ -169,8 +170,8 @@ class MemberFile:
         )  # fmt: skip
         for axis, values in (("y", layout.y), ("x", layout.x)):
             self._create(
-                axis, (axis,), "f8", values, long_name=f"distance along {axis}", units="m",
-                axis=axis.upper(),
+                axis, (axis,), "f8", values, standard_name=f"projection_{axis}_coordinate",
+                long_name=f"distance along {axis}", units="m", axis=axis.upper(),
             )  # fmt: skip
 
     def _write_static(self, layout: Layout, member: int) -> None:

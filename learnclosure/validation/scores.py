@@ -180,9 +180,11 @@ def _skill(
 def flux_scores(tensor: FloatArray, truth: FluxTruth) -> Scores:
     """Score the fluxes and divergences a tensor field makes of the mean gradients.
 
-    For each half of the members the flux ``-K grad C`` from that half's own mean gradients
-    is compared with that half's eddy flux, and both halves are scored together: the same
-    question an independent half's tensor is asked, so that the two scores compare.
+    The flux ``-K grad C`` is compared with the eddy flux of each half of the members, and
+    both halves are scored together: the same question an independent half's tensor is
+    asked, so that the two scores compare. The gradient is that of the full ensemble's mean,
+    the smooth mean a host carries; the noise of a half's own mean gradient would count
+    against large diffusivities, however right they are.
 
     Parameters
     ----------
@@ -198,13 +200,12 @@ def flux_scores(tensor: FloatArray, truth: FluxTruth) -> Scores:
         ensemble; one value a layer.
     """
     weights = np.where(np.isfinite(tensor).all(axis=0), truth.weights, 0.0)
-    flux_full, divergence_full = _skill(
-        down_gradient_flux(tensor, truth.gradient), truth.flux, weights, truth
-    )
+    predicted = down_gradient_flux(tensor, truth.gradient)
+    flux_full, divergence_full = _skill(predicted, truth.flux, weights, truth)
     flux_halves, divergence_halves = flux_full, divergence_full
-    if truth.half_gradient is not None and truth.half_flux is not None:
+    if truth.half_flux is not None:
         flux_halves, divergence_halves = _skill(
-            np.concatenate(list(down_gradient_flux(tensor, truth.half_gradient))),
+            np.concatenate([predicted] * len(truth.half_flux)),
             np.concatenate(list(truth.half_flux)),
             weights,
             truth,
@@ -232,15 +233,12 @@ def ceiling_scores(truth: FluxTruth) -> Scores | None:
     dict or None
         ``flux_r2`` and ``divergence_r2``, one value a layer; None without halves.
     """
-    if truth.half_tensor is None or truth.half_gradient is None or truth.half_flux is None:
+    if truth.half_tensor is None or truth.half_flux is None:
         return None
     others = truth.half_tensor[::-1]
     known = np.isfinite(truth.half_tensor).all(axis=(0, 1))
     weights = np.where(known, truth.weights, 0.0)
-    predicted = [
-        down_gradient_flux(tensor, gradient)
-        for tensor, gradient in zip(others, truth.half_gradient, strict=True)
-    ]
+    predicted = [down_gradient_flux(tensor, truth.gradient) for tensor in others]
     flux, spread = _skill(
         np.concatenate(predicted), np.concatenate(list(truth.half_flux)), weights, truth
     )

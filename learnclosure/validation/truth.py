@@ -36,8 +36,8 @@ class FluxTruth:
         Sea area of each cell where the tensor is determined, zero elsewhere.
     gradient, flux : ndarray, shape (tracer, 2, layer, y, x)
         Of the full ensemble; tracer units per metre and times metre per second.
-    half_gradient, half_flux : ndarray or None, shape (half, tracer, 2, layer, y, x)
-        Of each half of the members; None with fewer than four members.
+    half_flux : ndarray or None, shape (half, tracer, 2, layer, y, x)
+        Eddy flux of each half of the members; None with fewer than four members.
     half_tensor : ndarray or None, shape (half, 4, layer, y, x), m2 s-1
         Transport tensor of each half, components xx, xy, yx, yy.
     """
@@ -49,7 +49,6 @@ class FluxTruth:
     weights: FloatArray
     gradient: FloatArray
     flux: FloatArray
-    half_gradient: FloatArray | None
     half_flux: FloatArray | None
     half_tensor: FloatArray | None
 
@@ -131,9 +130,8 @@ def flux_truth(statistics: xr.Dataset) -> FluxTruth:
             where=f"statistics of region '{region}'",
             remedy="add members, snapshots or tracers",
         )
-    half_gradient = half_flux = half_tensor = None
+    half_flux = half_tensor = None
     if f"{tracers[0]}_eddy_flux_x_halves" in statistics:
-        half_gradient = _vectors(statistics, tracers, "gradient_{axis}_halves")
         half_flux = _vectors(statistics, tracers, "eddy_flux_{axis}_halves")
         half_tensor = np.stack(
             [_array(statistics, f"{name}_halves") for name in TENSOR_COMPONENTS], axis=1
@@ -146,7 +144,6 @@ def flux_truth(statistics: xr.Dataset) -> FluxTruth:
         weights=weights,
         gradient=_vectors(statistics, tracers, "gradient_{axis}"),
         flux=_vectors(statistics, tracers, "eddy_flux_{axis}"),
-        half_gradient=half_gradient,
         half_flux=half_flux,
         half_tensor=half_tensor,
     )
