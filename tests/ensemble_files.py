@@ -41,7 +41,11 @@ def member_dataset(
         role = "withheld" if name == "dye_d" else "inversion"
         attributes = {"units": "1", "long_name": name, "tracer_role": role}
         data[name] = (dims, values.astype(np.float32), attributes)
-    data["layer_thickness"] = ("layer", [1000.0, 3000.0], {"units": "m"})
+    data["layer_thickness"] = (
+        "layer",
+        [1000.0, 3000.0],
+        {"units": "m", "standard_name": "cell_thickness"},
+    )
     data["reduced_gravity"] = ("interface", [0.016], {"units": "m s-2"})
     data["sea_floor_depth"] = (
         ("y", "x"),

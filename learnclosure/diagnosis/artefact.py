@@ -36,14 +36,19 @@ class StatisticsBuilder:
     def __init__(self, x: FloatArray, y: FloatArray, layers: int) -> None:
         self.layers = layers
         self.variables: dict[str, xr.Variable] = {}
-        axis = {"x": ("x", x, "X", "x"), "y": ("y", y, "Y", "y")}
         self.coordinates: dict[str, xr.Variable] = {
             name: xr.Variable(
                 (name,),
                 np.asarray(values, dtype=np.float64),
-                {"long_name": f"distance along {label}", "units": "m", "axis": letter},
+                {
+                    # Without this name checkers take any horizontal axis for degrees.
+                    "standard_name": f"projection_{name}_coordinate",
+                    "long_name": f"distance along {name}",
+                    "units": "m",
+                    "axis": name.upper(),
+                },
             )
-            for name, (label, values, letter, _) in axis.items()
+            for name, values in (("x", x), ("y", y))
         }
         self.coordinates["layer"] = xr.Variable(
             ("layer",),

@@ -199,8 +199,9 @@ def _add_tensor(
 ) -> None:
     wet = estimator.geometry.mask
 
-    def known(values: FloatArray) -> FloatArray:
-        return np.where(wet, values, np.nan)
+    def known(values: FloatArray, where: npt.NDArray[np.bool_] = valid) -> FloatArray:
+        """Keep what the data determine; the fit's fill from neighbours is not written."""
+        return np.where(where, values, np.nan)
 
     for name, values in _tensor_components(whole.smooth.tensor).items():
         builder.add_named(f"transport_tensor_{name}", known(values))
@@ -216,10 +217,10 @@ def _add_tensor(
     for name, values in (("xx", xx), ("xy", xy), ("yy", yy)):
         builder.add_named(f"symmetric_tensor_{name}", known(values))
     builder.add_named("antisymmetric_tensor", known(alpha))
-    builder.add_named("scalar_diffusivity", known(scalar_diffusivity(whole.equations)))
+    builder.add_named("scalar_diffusivity", known(scalar_diffusivity(whole.equations), wet))
     condition = condition_number(whole.equations.M)
     builder.add_named(
-        "condition_number", known(np.where(np.isfinite(condition), condition, np.nan))
+        "condition_number", known(np.where(np.isfinite(condition), condition, np.nan), wet)
     )
     builder.add_named("valid", valid.astype(np.int8))
     builder.add(
@@ -247,7 +248,7 @@ def _add_quality(
         builder.add_named(
             f"transport_tensor_{name}",
             np.where(
-                estimator.geometry.mask,
+                valid,
                 np.stack([half.smooth.tensor[..., a, b] for half in halves]),
                 np.nan,
             ),

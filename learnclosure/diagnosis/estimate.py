@@ -207,10 +207,10 @@ class Estimator:
         spread = np.stack(
             [divergence(flux[0, 0], flux[0, 1], self.geometry) for flux in (predicted, true)]
         )
-        return (
-            flux_skill(predicted, true, weights),
-            divergence_skill(spread[0][None], spread[1][None], weights),
-        )
+        of_flux = flux_skill(predicted, true, weights)
+        of_divergence = divergence_skill(spread[0][None], spread[1][None], weights)
+        # A flux that does not vary has a divergence of rounding errors only.
+        return of_flux, np.where(np.isnan(of_flux), np.nan, of_divergence)
 
     def component_reliability(
         self, halves: tuple[GroupEstimate, ...], valid: BoolArray

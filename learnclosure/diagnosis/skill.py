@@ -7,6 +7,9 @@ import numpy.typing as npt
 
 FloatArray = npt.NDArray[np.float64]
 
+LEAST_VARIATION = 1e-10
+"""Fluxes whose standard deviation is a smaller share of their size vary by rounding only."""
+
 
 def flux_skill(predicted: FloatArray, true: FloatArray, weights: FloatArray) -> FloatArray:
     """Coefficient of determination of eddy fluxes in each layer.
@@ -25,7 +28,7 @@ def flux_skill(predicted: FloatArray, true: FloatArray, weights: FloatArray) -> 
     -------
     ndarray, shape (layer,)
         1 for a perfect prediction, 0 for the mean; NaN for a layer without weight or
-        without variance.
+        whose fluxes vary by no more than rounding.
 
     Examples
     --------
@@ -43,8 +46,9 @@ def flux_skill(predicted: FloatArray, true: FloatArray, weights: FloatArray) -> 
         departure = truth - mean[..., None, None]
         error = (weight * (guess - truth) ** 2).sum(axis=(1, -2, -1))
         variance = (weight * departure**2).sum(axis=(1, -2, -1))
+        size = (weight * truth**2).sum(axis=(1, -2, -1))
         skill = 1.0 - error / variance
-    skill[~(variance > 0.0)] = np.nan
+    skill[~(variance > LEAST_VARIATION**2 * size)] = np.nan
     return np.asarray(skill.mean(axis=0))
 
 

@@ -54,7 +54,7 @@ class Ensemble:
 
     def __init__(self, table: EnsembleTable, folder: Path) -> None:
         self.name = table.name
-        self.split = table.split
+        self.split: str = table.split
         self._table = table
         self._folder = folder
         self._stack = ExitStack()
