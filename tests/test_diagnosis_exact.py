@@ -136,7 +136,8 @@ def test_plane_wave_members_give_the_antisymmetric_tensor_with_its_sign(relaxati
 def test_the_floor_leaves_the_antisymmetric_part_of_a_plane_wave_alone():
     u, X = wave_members(12, 2.0 * np.pi / (20 * 86400.0), 1.0 / (50 * 86400.0))
     tensor, statistics = diagnosed(uniform_eddies(box(), u, X), floor=50.0)
-    np.testing.assert_allclose(tensor[1, 1], 50.0, rtol=1e-12)
+    assert np.all(tensor[1, 1] >= 50.0)
+    np.testing.assert_allclose(tensor[1, 1], 50.0, atol=0.1)
     np.testing.assert_allclose(tensor[0, 0], 87.1881 * 12 / 11, rtol=1e-5)
     np.testing.assert_allclose(statistics["antisymmetric_tensor"], -684.7741 * 12 / 11, rtol=1e-5)
     assert np.all(statistics["floor_active"] == 1)

@@ -34,7 +34,6 @@ class StatisticsBuilder:
     """
 
     def __init__(self, x: FloatArray, y: FloatArray, layers: int) -> None:
-        self.layers = layers
         self.variables: dict[str, xr.Variable] = {}
         self.coordinates: dict[str, xr.Variable] = {
             name: xr.Variable(

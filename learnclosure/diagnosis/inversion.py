@@ -19,7 +19,13 @@ import numpy.typing as npt
 from scipy.sparse import bmat, coo_matrix, csc_matrix, diags_array
 from scipy.sparse.linalg import splu
 
-from learnclosure.diagnosis.tensor import NormalEquations, scalar_diffusivity, with_floor
+from learnclosure.diagnosis.tensor import (
+    LARGEST_CONDITION_NUMBER,
+    NormalEquations,
+    condition_number,
+    scalar_diffusivity,
+    with_floor,
+)
 from learnclosure.ensemble.grid import Geometry
 from learnclosure.study import DiagnosisSettings
 
@@ -97,11 +103,12 @@ class _LayerSystem:
         wet: npt.NDArray[np.int64],
     ) -> None:  # fmt: skip
         smooth = strength * smoothness[wet][:, wet]
-        # A cell that neither data nor neighbours reach is held at its right-hand side.
+        # A cell that neither data nor neighbours reach is held at zero; the others are not.
+        undetermined = condition_number(M) > LARGEST_CONDITION_NUMBER
         weak = 1e-12 * max(float(np.max(area * np.trace(M, axis1=-2, axis2=-1))), 1e-300)
         blocks = [[diags_array(area * M[:, a, b]) for b in range(2)] for a in range(2)]
         for a in range(2):
-            blocks[a][a] = blocks[a][a] + smooth + weak * diags_array(np.ones(len(wet)))
+            blocks[a][a] = blocks[a][a] + smooth + diags_array(weak * undetermined)
         # The matrix is symmetric and positive definite: no pivoting, half the fill-in.
         self.factor = splu(
             csc_matrix(bmat(blocks)),

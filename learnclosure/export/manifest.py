@@ -21,7 +21,7 @@ if TYPE_CHECKING:
 
 CONVENTIONS = {
     "tensor": TENSOR_CONVENTION,
-    "axes": "components along the model's own x and y axes, y northward of x by a right angle",
+    "axes": "components along the model's own axes; y is x turned anticlockwise by a right angle",
     "layers": "from the top down; layer_index 0 is the uppermost",
     "units": "SI in and out",
     "land": "leave land out; every input must be finite",

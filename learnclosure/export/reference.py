@@ -38,7 +38,8 @@ def with_tails(inputs: Mapping[str, FloatArray]) -> dict[str, FloatArray]:
     dict of str to ndarray, shape (more points,)
         The points given; then variants of some of them: every value times ten, a
         thousand and a millionth, all signs turned (the other hemisphere), no potential
-        vorticity gradient, no rotation, no eddy energy; and one point of zeros.
+        vorticity gradient, no rotation, no eddy energy; and one point of zeros but for the
+        deformation radius, which by its definition has none.
     """
     count = len(next(iter(inputs.values())))
     chosen = np.unique(np.linspace(0, count - 1, min(count, VARIED_POINTS)).astype(np.int64))
@@ -59,7 +60,10 @@ def with_tails(inputs: Mapping[str, FloatArray]) -> dict[str, FloatArray]:
             for name, values in inputs.items()
         },
         *(without(word) for word in ("pv_gradient", "coriolis_parameter", "energy")),
-        {name: np.zeros(1) for name in inputs},
+        {
+            name: values[:1] * (1.0 if name == "deformation_radius" else 0.0)
+            for name, values in inputs.items()
+        },
     ]
     # Adding zero makes negative zeros positive, which a file need not keep apart.
     return {name: np.concatenate([part[name] for part in variants]) + 0.0 for name in inputs}

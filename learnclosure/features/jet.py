@@ -54,7 +54,7 @@ def _running_mean(values: FloatArray, wet: FloatArray, axis: int, periodic: bool
 
 def _sections(
     flow: FloatArray, width: FloatArray, wet: FloatArray, periodic: bool, left: float
-) -> tuple[FloatArray, ...]:
+) -> Jet:
     """Analyse sections that run along the first axis of (across, along) fields.
 
     ``left`` is 1 if the left of a positive flow lies towards larger indices, else -1.
@@ -78,7 +78,12 @@ def _sections(
     sign = left * np.where(flow[axis_row, along] < 0.0, -1.0, 1.0)
     distance = np.clip(sign * offset / jet_width, -LARGEST_DISTANCE, LARGEST_DISTANCE)
     spread = np.ones_like(flow)
-    return np.where(found, distance, 0.0), peak * spread, jet_width * spread, found * spread > 0.0
+    return Jet(
+        distance=np.where(found, distance, 0.0),
+        speed=peak * spread,
+        width=jet_width * spread,
+        found=np.asarray(found & (spread > 0.0)),
+    )
 
 
 def find_jet(state: MeanState) -> Jet:
@@ -104,7 +109,7 @@ def find_jet(state: MeanState) -> Jet:
     flow = _running_mean(flow, wet, 1, geometry.periodic_x)
     if along_x:
         # North lies to the left of an eastward flow.
-        return Jet(*_sections(flow, geometry.dy, wet, geometry.periodic_y, 1.0))
+        return _sections(flow, geometry.dy, wet, geometry.periodic_y, 1.0)
     # West lies to the left of a northward flow.
-    parts = _sections(flow.T, geometry.dx.T, wet.T, geometry.periodic_x, -1.0)
-    return Jet(*(part.T for part in parts))
+    turned = _sections(flow.T, geometry.dx.T, wet.T, geometry.periodic_x, -1.0)
+    return Jet(turned.distance.T, turned.speed.T, turned.width.T, turned.found.T)

@@ -45,7 +45,7 @@ def unstratified(state: MeanState) -> npt.NDArray[np.bool_]:
     """
     least = LEAST_BUOYANCY_FREQUENCY_SQUARED * state.interface_spacing
     stable = state.interface_wet & (state.reduced_gravity > least)
-    return ~np.any(stable, axis=0)
+    return np.asarray(~np.any(stable, axis=0))
 
 
 def gravity_wave_speed(state: MeanState) -> FloatArray:
