@@ -47,6 +47,10 @@ def _cells(values: list[float | None] | None) -> str:
     return " / ".join("-" if value is None else f"{value:.2f}" for value in values)
 
 
+def _number(value: float | None) -> str:
+    return "-" if value is None else f"{value:.3g}"
+
+
 def evaluation_listing(evaluation: Mapping[str, Any]) -> list[Table]:
     """Tabulate flux scores by region and the audit.
 
@@ -84,7 +88,7 @@ def evaluation_listing(evaluation: Mapping[str, Any]) -> list[Table]:
         for check in checks:
             audit.add_row(
                 family, check["check"], "passed" if check["passed"] else "FAILED",
-                f"{check['value']:.3g}", f"{check['limit']:.3g}",
+                _number(check["value"]), _number(check["limit"]),
             )  # fmt: skip
     return [scores, audit]
 

@@ -133,13 +133,16 @@ def test_plane_wave_members_give_the_antisymmetric_tensor_with_its_sign(relaxati
     np.testing.assert_allclose(alpha, expected[1, 0], rtol=1e-6)
 
 
-def test_the_floor_leaves_the_antisymmetric_part_of_a_plane_wave_alone():
+@pytest.mark.parametrize(("method", "tolerance"), [("projection", 1e-5), ("admm", 1e-2)])
+def test_the_floor_keeps_the_antisymmetric_part_of_a_plane_wave(method, tolerance):
     u, X = wave_members(12, 2.0 * np.pi / (20 * 86400.0), 1.0 / (50 * 86400.0))
-    tensor, statistics = diagnosed(uniform_eddies(box(), u, X), floor=50.0)
-    assert np.all(tensor[1, 1] >= 50.0)
+    tensor, statistics = diagnosed(uniform_eddies(box(), u, X), floor=50.0, floor_method=method)
+    assert np.all(tensor[1, 1] >= 50.0 - 1e-9)
     np.testing.assert_allclose(tensor[1, 1], 50.0, atol=0.1)
-    np.testing.assert_allclose(tensor[0, 0], 87.1881 * 12 / 11, rtol=1e-5)
-    np.testing.assert_allclose(statistics["antisymmetric_tensor"], -684.7741 * 12 / 11, rtol=1e-5)
+    # Inside the fit, a raised component also moves those its gradients are correlated with.
+    np.testing.assert_allclose(tensor[0, 0], 87.1881 * 12 / 11, rtol=tolerance)
+    alpha = statistics["antisymmetric_tensor"]
+    np.testing.assert_allclose(alpha, -684.7741 * 12 / 11, rtol=tolerance)
     assert np.all(statistics["floor_active"] == 1)
 
 

@@ -135,9 +135,9 @@ def test_the_plane_wave_tensor_comes_back_through_files_and_inversion(tmp_path):
         tensor = np.array([[found[f"transport_tensor_{a}{b}"].values for b in "xy"] for a in "xy"])
     exact = np.array([[87.1881, 684.7741], [-684.7741, 21.7970]])
     # Twelve equally spaced phases make sums over N exact; the diagnosis divides by N - 1.
-    np.testing.assert_allclose(tensor[:, :, 0, 0, 0] * 11 / 12, exact, rtol=1e-6)
+    np.testing.assert_allclose(tensor[:, :, 0, 0, 0] * 11 / 12, exact, rtol=5e-6)
     np.testing.assert_allclose(exact_plane_wave_tensor(0.1, 0.05, 2 * np.pi / (20 * 86400.0),
-        relaxation=1 / (50 * 86400.0)), exact, rtol=1e-6)  # fmt: skip
+        relaxation=1 / (50 * 86400.0)), exact, rtol=5e-6)  # fmt: skip
 
 
 def expected_spinning(layer):

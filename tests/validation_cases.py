@@ -112,7 +112,6 @@ def statistics(
             data[f"{tracer}_eddy_flux_{axis}"] = (FIELD, carried)
             if halves:
                 spread = noise * carried.std() * random.normal(size=(2, *carried.shape))
-                data[f"{tracer}_gradient_{axis}_halves"] = (("half", *FIELD), np.stack([along] * 2))
                 data[f"{tracer}_eddy_flux_{axis}_halves"] = (("half", *FIELD), carried + spread)
     return data
 

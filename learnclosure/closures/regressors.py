@@ -162,6 +162,9 @@ class BoostingRegressor(MultiOutputRegressor):
         self.random_state = random_state
 
     def _fit(self, matrix: FloatArray, outputs: FloatArray, weights: FloatArray) -> None:
+        # Thresholds fall on values of the sample; in single precision a value that differs
+        # only by rounding does not lie exactly on one.
+        matrix = matrix.astype(np.float32).astype(np.float64)
         self.n_iter_ = self.max_iter
         # Equal weights change nothing, but weighted binning takes ten times as long.
         needed = None if np.ptp(weights) == 0.0 else weights

@@ -17,6 +17,7 @@ from learnclosure.quantities import FEATURES, Quantity
 LEAST_CORIOLIS = 1e-6
 LEAST_DRIFT = 1e-4
 LEAST_SPEED = 1e-4
+LEAST_RADIUS = 100.0
 LARGEST_RATIO = 1e3
 
 
@@ -47,7 +48,7 @@ def _shared(xp: Any, axes: Axes, inputs: Mapping[str, Any]) -> dict[str, Any]:
     """Features of both kinds of closures, pure numbers."""
     coriolis = xp.maximum(xp.abs(inputs["coriolis_parameter"]), LEAST_CORIOLIS)
     hemisphere = xp.where(inputs["coriolis_parameter"] < 0.0, -1.0, 1.0)
-    radius = inputs["deformation_radius"]
+    radius = xp.maximum(inputs["deformation_radius"], LEAST_RADIUS)
     beta = planetary_beta(xp, inputs)
     drift = xp.maximum(beta * radius * radius, LEAST_DRIFT)
     vorticity = inputs["velocity_gradient_yx"] - inputs["velocity_gradient_xy"]
@@ -88,7 +89,7 @@ def _shared(xp: Any, axes: Axes, inputs: Mapping[str, Any]) -> dict[str, Any]:
 
 def _amplitudes(xp: Any, inputs: Mapping[str, Any]) -> dict[str, Any]:
     """Dimensional features, which stand for the strength of eddies nobody gives."""
-    radius = inputs["deformation_radius"]
+    radius = xp.maximum(inputs["deformation_radius"], LEAST_RADIUS)
     growth = inputs["eady_growth_rate"]
     shear = _length(xp, inputs["shear_x"], inputs["shear_y"])
     return {
@@ -104,7 +105,7 @@ def _amplitudes(xp: Any, inputs: Mapping[str, Any]) -> dict[str, Any]:
 
 def _energy(xp: Any, axes: Axes, inputs: Mapping[str, Any]) -> dict[str, Any]:
     """Features of closures whose host gives eddy energy, pure numbers."""
-    radius = inputs["deformation_radius"]
+    radius = xp.maximum(inputs["deformation_radius"], LEAST_RADIUS)
     speed = xp.maximum(eddy_speed(xp, inputs["eddy_kinetic_energy"]), LEAST_SPEED)
     column = xp.maximum(eddy_speed(xp, inputs["eddy_kinetic_energy_column"]), LEAST_SPEED)
     coriolis = xp.maximum(xp.abs(inputs["coriolis_parameter"]), LEAST_CORIOLIS)

@@ -15,7 +15,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 from joblib import Parallel, delayed
-from threadpoolctl import threadpool_limits  # type: ignore[import-untyped]
+from threadpoolctl import threadpool_limits
 
 from learnclosure.closures.closure import Closure
 from learnclosure.closures.table import Table
