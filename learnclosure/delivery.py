@@ -17,6 +17,7 @@ from learnclosure.study import Study
 from learnclosure.workflow import (
     Progress,
     artefacts,
+    closure_digests,
     load_closures,
     load_statistics,
     read_json,
@@ -167,44 +168,54 @@ def export_study(study: Study, *, progress: Progress = silent) -> None:
     LearnclosureError
         If an earlier stage is missing or an exported form does not agree with the closure.
     """
+    places = artefacts(study)
+    evaluation = read_json(places.evaluation, "run 'learnclosure evaluate' on the study first")
+    pending: dict[str, str] = {}
+    for family, digest in closure_digests(study).items():
+        folder = places.bundle(family)
+        mark = fingerprint(
+            f"export-{family}",
+            {
+                "settings": study.export.model_dump(mode="json"),
+                "closure": digest,
+                "evaluation": file_digest(places.evaluation),
+            },
+        )
+        standing = _bundle_files(folder) if folder.is_dir() else []
+        if standing and places.current(f"export-{family}", mark, standing):
+            progress(f"export {family}", 1.0, "stands already")
+        else:
+            pending[family] = mark
+    if pending:
+        _export_families(study, pending, evaluation, progress)
+
+
+def _export_families(
+    study: Study, pending: Mapping[str, str], evaluation: Mapping[str, Any], progress: Progress
+) -> None:
+    """Export the families whose fingerprints are given."""
     from learnclosure.export.bundle import export_bundle
     from learnclosure.report.model_card import render_model_card
 
     places = artefacts(study)
     statistics = load_statistics(study)
     closures = load_closures(study)
-    evaluation = read_json(places.evaluation, "run 'learnclosure evaluate' on the study first")
-    training = {
-        table.name: statistics[table.name] for table in study.ensembles if table.split == "train"
-    }
-    for family, closure in closures.items():
-        folder = places.bundle(family)
-        stage = f"export-{family}"
-        mark = fingerprint(
-            stage,
-            {
-                "settings": study.export.model_dump(mode="json"),
-                "closure": file_digest(places.closure(family)),
-                "evaluation": file_digest(places.evaluation),
-            },
-        )
-        standing = _bundle_files(folder) if folder.is_dir() else []
-        if standing and places.current(stage, mark, standing):
-            progress(f"export {family}", 1.0, "stands already")
-            continue
+    trained = [table.name for table in study.ensembles if table.split == "train"]
+    history = provenance(study, {name: statistics[name] for name in trained})
+    points = reference_inputs(statistics, study.export.reference_points, study.closure.seed)
+    for family, mark in pending.items():
         progress(f"export {family}", 0.0, "")
+        folder = places.bundle(family)
         export_bundle(
-            closure,
+            closures[family],
             folder,
-            provenance=provenance(study, training),
+            provenance=history,
             evaluation=evaluation,
-            reference_inputs=reference_inputs(
-                statistics, study.export.reference_points, study.closure.seed
-            ),
+            reference_inputs=points,
             settings=study.export,
             render_card=render_model_card,
         )
-        places.note(stage, mark, _bundle_files(folder))
+        places.note(f"export-{family}", mark, _bundle_files(folder))
         progress(f"export {family}", 1.0, "done")
 
 
@@ -226,23 +237,20 @@ def report_study(study: Study, *, progress: Progress = silent) -> Path:
     LearnclosureError
         If an earlier stage is missing.
     """
-    from learnclosure.report.page import write_report
-
     places = artefacts(study)
-    statistics = load_statistics(study)
-    closures = load_closures(study)
+    digests = closure_digests(study)
     evaluation = read_json(places.evaluation, "run 'learnclosure evaluate' on the study first")
     mark = fingerprint(
-        "report",
-        {
-            "evaluation": file_digest(places.evaluation),
-            "closures": {name: file_digest(places.closure(name)) for name in closures},
-        },
+        "report", {"evaluation": file_digest(places.evaluation), "closures": digests}
     )
     if places.current("report", mark, [places.report]):
         progress("report", 1.0, "stands already")
         return places.report
+    from learnclosure.report.page import write_report
+
     progress("report", 0.0, "")
+    statistics = load_statistics(study)
+    closures = load_closures(study)
     predictions = {
         family: {name: predict_region(closure, data) for name, data in statistics.items()}
         for family, closure in closures.items()

@@ -141,21 +141,56 @@ def load_statistics(study: Study, split: str | None = None) -> dict[str, xr.Data
     """
     import xarray as xr
 
-    places = artefacts(study)
     loaded: dict[str, xr.Dataset] = {}
-    for table in study.ensembles:
-        if split is not None and table.split != split:
-            continue
-        path = places.statistics(table.name)
+    for region, path in _statistics_paths(study, split).items():
+        with xr.open_dataset(path, engine="h5netcdf") as dataset:
+            loaded[region] = dataset.load()
+    return loaded
+
+
+def _statistics_paths(study: Study, split: str | None = None) -> dict[str, Path]:
+    """Paths of the statistics of all regions of a split, which must be there."""
+    places = artefacts(study)
+    paths = {
+        table.name: places.statistics(table.name)
+        for table in study.ensembles
+        if split is None or table.split == split
+    }
+    for path in paths.values():
         if not path.is_file():
             raise TrainingError(
                 "the region has not been diagnosed",
                 where=path,
                 remedy="run 'learnclosure diagnose' on the study first",
             )
-        with xr.open_dataset(path, engine="h5netcdf") as dataset:
-            loaded[table.name] = dataset.load()
-    return loaded
+    return paths
+
+
+def closure_digests(study: Study) -> dict[str, str]:
+    """Return the digest of each family's trained closure.
+
+    Parameters
+    ----------
+    study : Study
+
+    Returns
+    -------
+    dict of str to str
+
+    Raises
+    ------
+    TrainingError
+        If a family has not been trained yet.
+    """
+    places = artefacts(study)
+    for family in study.closure.families:
+        if not places.closure(family).is_file():
+            raise TrainingError(
+                "the family has not been trained",
+                where=places.closure(family),
+                remedy="run 'learnclosure train' on the study first",
+            )
+    return {family: file_digest(places.closure(family)) for family in study.closure.families}
 
 
 def load_closures(study: Study) -> dict[str, Closure]:
@@ -178,26 +213,11 @@ def load_closures(study: Study) -> dict[str, Closure]:
     import joblib
 
     places = artefacts(study)
-    closures: dict[str, Closure] = {}
-    for family in study.closure.families:
-        path = places.closure(family)
-        if not path.is_file():
-            raise TrainingError(
-                "the family has not been trained",
-                where=path,
-                remedy="run 'learnclosure train' on the study first",
-            )
-        closures[family] = joblib.load(path)
-    return closures
+    return {family: joblib.load(places.closure(family)) for family in closure_digests(study)}
 
 
 def _statistics_digests(study: Study, split: str | None = None) -> dict[str, str]:
-    places = artefacts(study)
-    return {
-        table.name: file_digest(places.statistics(table.name))
-        for table in study.ensembles
-        if split is None or table.split == split
-    }
+    return {name: file_digest(path) for name, path in _statistics_paths(study, split).items()}
 
 
 def train_study(study: Study, *, progress: Progress = silent) -> None:
@@ -214,14 +234,8 @@ def train_study(study: Study, *, progress: Progress = silent) -> None:
     TrainingError
         If a region has not been diagnosed or the table cannot be trained from.
     """
-    import joblib
-
-    from learnclosure.closures.table import table_from_statistics
-    from learnclosure.validation.selection import select_closure
-
     places = artefacts(study)
-    statistics = load_statistics(study, "train")
-    table = None
+    pending: dict[str, str] = {}
     for family in study.closure.families:
         stage = f"train-{family}"
         mark = fingerprint(
@@ -236,9 +250,23 @@ def train_study(study: Study, *, progress: Progress = silent) -> None:
         outputs = [places.closure(family), places.selection(family)]
         if places.current(stage, mark, outputs):
             progress(f"train {family}", 1.0, "stands already")
-            continue
-        if table is None:
-            table = table_from_statistics(list(statistics.values()))
+        else:
+            pending[family] = mark
+    if pending:
+        _train_families(study, pending, progress)
+
+
+def _train_families(study: Study, pending: Mapping[str, str], progress: Progress) -> None:
+    """Train the families whose fingerprints are given."""
+    import joblib
+
+    from learnclosure.closures.table import table_from_statistics
+    from learnclosure.validation.selection import select_closure
+
+    places = artefacts(study)
+    statistics = load_statistics(study, "train")
+    table = table_from_statistics(list(statistics.values()))
+    for family, mark in pending.items():
 
         def family_progress(share: float, note: str, family: str = family) -> None:
             progress(f"train {family}", share, note)
@@ -254,7 +282,7 @@ def train_study(study: Study, *, progress: Progress = silent) -> None:
         with atomic_path(places.closure(family)) as temporary:
             joblib.dump(closure, temporary)
         write_json(places.selection(family), selection.as_record())
-        places.note(stage, mark, outputs)
+        places.note(f"train-{family}", mark, [places.closure(family), places.selection(family)])
         progress(f"train {family}", 1.0, "done")
 
 
@@ -323,11 +351,7 @@ def evaluate_study(study: Study, *, progress: Progress = silent) -> dict[str, An
     TrainingError
         If a region or family is missing.
     """
-    from learnclosure.validation.evaluation import evaluate
-
     places = artefacts(study)
-    statistics = load_statistics(study)
-    closures = load_closures(study)
     mark = fingerprint(
         "evaluate",
         {
@@ -335,13 +359,17 @@ def evaluate_study(study: Study, *, progress: Progress = silent) -> dict[str, An
             "validation": study.validation.model_dump(mode="json"),
             "statistics": _statistics_digests(study),
             "splits": {table.name: table.split for table in study.ensembles},
-            "closures": {name: file_digest(places.closure(name)) for name in closures},
+            "closures": closure_digests(study),
         },
     )
     remedy = "run 'learnclosure evaluate' on the study first"
     if places.current("evaluate", mark, [places.evaluation]):
         progress("evaluate", 1.0, "stands already")
         return read_json(places.evaluation, remedy)
+    from learnclosure.validation.evaluation import evaluate
+
+    statistics = load_statistics(study)
+    closures = load_closures(study)
     selections = {
         family: read_json(places.selection(family), "run 'learnclosure train' again")
         for family in closures

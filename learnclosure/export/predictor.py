@@ -16,7 +16,7 @@ from learnclosure.export.layout import GRAPH_FILE, MANIFEST_FILE, digest
 from learnclosure.export.mean_fields import read_mean_fields, write_predictions
 from learnclosure.export.runtime import open_session, run_session
 from learnclosure.features.inputs import compute_inputs
-from learnclosure.quantities import INPUTS, MEAN_STATE
+from learnclosure.quantities import INPUTS
 
 FloatArray = npt.NDArray[np.float64]
 
@@ -167,5 +167,4 @@ def _attributes(predictor: Predictor) -> dict[str, Any]:
         "licence": manifest["licence"],
         "manifest_sha256": predictor.manifest_digest,
         "tensor_convention": str(manifest["conventions"].get("tensor", "")),
-        "mean_fields": " ".join(MEAN_STATE),
     }
