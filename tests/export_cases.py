@@ -6,13 +6,14 @@ from functools import cache
 
 import numpy as np
 from closures_cases import invented_regions
+from onnx.reference import ReferenceEvaluator
+
 from learnclosure.closures.closure import Closure
 from learnclosure.closures.intervals import HalfWidths
 from learnclosure.closures.table import Table, table_from_statistics
 from learnclosure.export.bundle import export_bundle
 from learnclosure.export.runtime import open_session
 from learnclosure.study import ClosureSettings, ExportSettings
-from onnx.reference import ReferenceEvaluator
 
 
 @cache

@@ -3,6 +3,7 @@ import pytest
 from export_cases import evaluate_twice
 from hypothesis import given, settings
 from hypothesis import strategies as st
+
 from learnclosure.closures.constraints import bounded_tensor
 from learnclosure.export.builder import GraphBuilder
 from learnclosure.export.trace import Traced, TracingNamespace
@@ -10,11 +11,11 @@ from learnclosure.features.frames import frame_axes, tensor_to_frame, tensor_to_
 
 NUMBERS = st.floats(-1e3, 1e3, allow_nan=False)
 EXACT = {
-    "add": lambda xp, a, b: a + b,
-    "subtract": lambda xp, a, b: a - b,
-    "multiply": lambda xp, a, b: a * b,
+    "add": lambda _xp, a, b: a + b,
+    "subtract": lambda _xp, a, b: a - b,
+    "multiply": lambda _xp, a, b: a * b,
     "divide": lambda xp, a, b: a / (xp.abs(b) + 0.5),
-    "negate": lambda xp, a, b: -a - b,
+    "negate": lambda _xp, a, b: -a - b,
     "root": lambda xp, a, b: xp.sqrt(xp.abs(a)) + b,
     "maximum": lambda xp, a, b: xp.maximum(a, b),
     "minimum": lambda xp, a, b: xp.minimum(a, b),
@@ -51,7 +52,7 @@ def traced_model(function, names=("x", "y")):
 @given(EXPRESSIONS, st.lists(st.tuples(NUMBERS, NUMBERS), min_size=1, max_size=5))
 def test_elementwise_code_gives_the_same_bits_in_the_graph(expression, points):
     x, y = (np.array(column) for column in zip(*points, strict=True))
-    expected = np.broadcast_to(evaluate(np, (("add"), expression, "x"), {"x": x, "y": y}), x.shape)
+    expected = np.broadcast_to(evaluate(np, ("add", expression, "x"), {"x": x, "y": y}), x.shape)
     model = traced_model(lambda xp, values: [evaluate(xp, ("add", expression, "x"), values)])
     used = {value.name for value in model.graph.input}
     feed = {n: v[:, None] for n, v in (("x", x), ("y", y)) if n in used}
@@ -91,7 +92,7 @@ def test_frames_and_bounds_give_the_same_bits_in_the_graph():
 
 def test_division_by_a_constant_stays_a_division():
     # onnxruntime issue 4130: a reciprocal in its place moves values across thresholds.
-    model = traced_model(lambda xp, v: [v["x"] / 3.0])
+    model = traced_model(lambda _xp, v: [v["x"] / 3.0])
     assert [node.op_type for node in model.graph.node] == ["Div", "Identity"]
 
 
@@ -117,7 +118,7 @@ def test_what_no_output_needs_is_left_out():
 
 
 def test_numpy_numbers_may_stand_on_the_left():
-    model = traced_model(lambda xp, v: [np.float64(2.0) * v["x"] - np.float64(1.0) / v["y"]])
+    model = traced_model(lambda _xp, v: [np.float64(2.0) * v["x"] - np.float64(1.0) / v["y"]])
     run, _ = evaluate_twice(model, {"x": np.array([[3.0]]), "y": np.array([[4.0]])})
     assert run[0] == 5.75
 
