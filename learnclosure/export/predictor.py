@@ -68,7 +68,7 @@ class Predictor:
             for name in self.inputs
             if name in inputs
         }
-        shape = arrays[self.inputs[0]].shape if self.inputs[0] in arrays else ()
+        shape = next(iter(arrays.values())).shape if arrays else ()
         for name, values in arrays.items():
             if values.shape != shape:
                 raise InputError(

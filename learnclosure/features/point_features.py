@@ -18,6 +18,7 @@ LEAST_CORIOLIS = 1e-6
 LEAST_DRIFT = 1e-4
 LEAST_SPEED = 1e-4
 LEAST_RADIUS = 100.0
+LEAST_GRADIENT_SUM = 1e-13
 LARGEST_RATIO = 1e3
 
 
@@ -63,7 +64,8 @@ def _shared(xp: Any, axes: Axes, inputs: Mapping[str, Any]) -> dict[str, Any]:
     slope_n, slope_t = vector_to_frame(
         xp, axes, inputs["topographic_beta_x"], inputs["topographic_beta_y"]
     )
-    stretch = xp.maximum(pv_gradient, 1e-13)
+    # Both sizes in the denominator keep the ratio bounded where the gradient vanishes.
+    both = xp.maximum(pv_gradient + beta, LEAST_GRADIENT_SUM)
     return {
         "flow_across_ratio": _bounded(xp, flow_n / drift),
         "flow_along_ratio": _bounded(xp, flow_t / drift),
@@ -74,8 +76,8 @@ def _shared(xp: Any, axes: Axes, inputs: Mapping[str, Any]) -> dict[str, Any]:
         "shear_strain_ratio": shear / coriolis,
         "okubo_weiss_ratio": (strain * strain - vorticity * vorticity) / (coriolis * coriolis),
         "pv_gradient_ratio": _bounded(xp, pv_gradient * radius * radius / drift),
-        "planetary_beta_across": hemisphere * beta_n / stretch,
-        "planetary_beta_along": hemisphere * beta_t / stretch,
+        "planetary_beta_across": hemisphere * beta_n / both,
+        "planetary_beta_along": hemisphere * beta_t / both,
         "topographic_beta_across": _bounded(xp, hemisphere * slope_n * radius * radius / drift),
         "topographic_beta_along": _bounded(xp, hemisphere * slope_t * radius * radius / drift),
         "charney_green_number": inputs["charney_green_number"],

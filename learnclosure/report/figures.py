@@ -221,13 +221,13 @@ def prediction_maps(
             for number, (family, guess) in enumerate(guesses.items()):
                 _map(row[1 + 2 * number], guess[layer], extent, limit, signed=True, title=family)
                 _map(row[2 + 2 * number], guess[layer] - true[layer], extent, limit, signed=True,
-                     title="less diagnosed")  # fmt: skip
+                     title="minus diagnosed")  # fmt: skip
             figure.colorbar(image, ax=list(row), shrink=0.85, label="m2 s-1", extend="both")
         _label_axes(axes)
         return _picture(
             figure,
             f"Maps of {part} of {region}, diagnosed and predicted by each family",
-            f"{part} of {region}: diagnosed, predicted, and predicted less diagnosed. "
+            f"{part} of {region}: diagnosed, predicted, and predicted minus diagnosed. "
             "One colour scale for each layer.",
         )
 
@@ -352,7 +352,7 @@ def score_chart(evaluation: Mapping[str, Any], measure: str, title: str) -> Pict
                 _dots(panel, fitted, region, place, measure, layer, hollow=True)
                 _dots(panel, families, region, place, measure, layer, hollow=False)
             panel.set_yticks(range(len(regions)), regions)
-            panel.invert_yaxis()
+            panel.set_ylim(len(regions) - 0.5, -0.5)
             panel.set_xlim(-0.25, 1.0)
             panel.set_title(layer_name(layer, layers))
             panel.set_xlabel(f"R2 of {title} (values below -0.25 are drawn at the edge)")

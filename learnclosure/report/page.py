@@ -46,7 +46,7 @@ def _half_width_note(evaluation: Mapping[str, Any]) -> str:
         half_width = record.get("half_width") or {}
         text = half_width.get("guarantee") or half_width.get("meaning")
         if text:
-            return str(text)
+            return f"{str(text)[:1].upper()}{str(text)[1:].removesuffix('.')}."
     return ""
 
 
