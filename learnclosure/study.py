@@ -173,7 +173,9 @@ class ValidationSettings(Section):
     """How closures are scored."""
 
     folds: int = Field(4, ge=2, le=20, description="folds of the random and blocked splits")
-    block_cells: int = Field(8, ge=1, description="side of a spatial block, coarse cells")
+    block_cells: int = Field(
+        8, ge=1, description="side of a spatial block, coarse cells; less in small regions"
+    )
 
 
 class ExportSettings(Section):

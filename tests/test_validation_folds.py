@@ -111,10 +111,18 @@ def test_a_region_too_narrow_for_strips_is_refused():
         region_folds(np.array(["a"] * 3), np.arange(3))
 
 
-def test_blocks_larger_than_the_region_are_refused():
+def test_blocks_larger_than_the_region_are_halved_until_every_fold_has_one():
     region, _, row, column = two_regions()
-    with pytest.raises(TrainingError, match=r"fold 'blocks \d'.*smaller blocks"):
-        blocked_folds(region, row, column, folds=3, block_cells=100, seed=0)
+    folds = blocked_folds(region, row, column, folds=3, block_cells=64, seed=0)
+    assert len(folds) == 3
+    assert all(fold.test.any() for fold in folds)
+
+
+def test_a_region_with_fewer_cells_than_folds_is_refused():
+    few = np.zeros(4, dtype=int)
+    with pytest.raises(TrainingError, match=r"fold 'blocks \d'.*use fewer folds"):
+        blocked_folds(few, np.array([0, 0, 1, 1]), np.array([0, 1, 0, 1]), folds=5,
+                      block_cells=8, seed=0)  # fmt: skip
 
 
 @pytest.mark.parametrize(

@@ -147,7 +147,7 @@ def blocked_folds(
     folds : int
         Number of folds, at least 2; each region's blocks are dealt out evenly.
     block_cells : int
-        Side of a block in cells.
+        Side of a block in cells; halved in a region too small to give every fold a block.
     seed : int
     buffer_cells : int, optional
         Cells around each scored block that are not trained on.
@@ -165,16 +165,27 @@ def blocked_folds(
     random = np.random.default_rng(seed)
     for code in np.unique(region):
         here = region == code
-        blocks = np.stack([row[here] // block_cells, column[here] // block_cells], axis=1)
-        corners, member = np.unique(blocks, axis=0, return_inverse=True)
-        hand = random.permutation(np.arange(len(corners)) % folds)
-        part[here] = hand[member.reshape(-1)]
+        count, member = _blocks(row[here], column[here], folds, block_cells)
+        hand = random.permutation(np.arange(count) % folds)
+        part[here] = hand[member]
     made = []
     for number in range(folds):
         test = part == number
         near = _near(region, row, column, test, buffer_cells) if buffer_cells else test
         made.append(_fold(~near, test, f"blocks {number + 1}"))
     return check_folds(made, region.size)
+
+
+def _blocks(
+    row: npt.NDArray[Any], column: npt.NDArray[Any], folds: int, side: int
+) -> tuple[int, npt.NDArray[np.int64]]:
+    """Deal the cells of one region into blocks, at least one a fold where that can be."""
+    while True:
+        blocks = np.stack([row // side, column // side], axis=1)
+        corners, member = np.unique(blocks, axis=0, return_inverse=True)
+        if len(corners) >= folds or side == 1:
+            return len(corners), member.reshape(-1)
+        side = (side + 1) // 2
 
 
 def _near(
