@@ -115,7 +115,7 @@ def test_blocks_larger_than_the_region_are_halved_until_every_fold_has_one():
     region, _, row, column = two_regions()
     folds = blocked_folds(region, row, column, folds=3, block_cells=64, seed=0)
     assert len(folds) == 3
-    assert all(fold.test.any() for fold in folds)
+    assert all(fold.test.size for fold in folds)
 
 
 def test_a_region_with_fewer_cells_than_folds_is_refused():
