@@ -38,9 +38,9 @@ $(VENV)/test.stamp: $(VENV)/run.stamp requirements-test.lock
 	touch $@
 
 lock: $(VENV)/test.stamp
-	echo hatchling | $(BIN)/uv pip compile pyproject.toml - --universal --python-version 3.11 \
+	printf 'hatchling\neditables\n' | $(BIN)/uv pip compile pyproject.toml - --universal --python-version 3.11 \
 	  --generate-hashes --no-emit-index-url --no-header --quiet --output-file requirements.lock
-	echo hatchling | $(BIN)/uv pip compile pyproject.toml - --extra test --universal \
+	printf 'hatchling\neditables\n' | $(BIN)/uv pip compile pyproject.toml - --extra test --universal \
 	  --python-version 3.11 --generate-hashes --no-emit-index-url --no-header --quiet \
 	  --constraint requirements.lock --output-file requirements-test.lock
 
