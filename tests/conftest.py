@@ -5,6 +5,18 @@ from __future__ import annotations
 import os
 
 import pytest
+from ensemble_files import QUICK, run_command, write_members, write_study
+
+
+@pytest.fixture(scope="session")
+def finished(tmp_path_factory):
+    """Run a study over two training regions and a held-out one, once for all tests."""
+    folder = tmp_path_factory.mktemp("whole")
+    for number, name in enumerate(("north", "south", "west")):
+        write_members(folder / name, members=5, rows=16, columns=20, seed=number)
+    study = write_study(folder, "north", "south", "west", west="test", extra=QUICK)
+    assert run_command("run", study) == 0
+    return folder
 
 
 @pytest.hookimpl(hookwrapper=True)

@@ -6,7 +6,18 @@ from collections.abc import Callable
 from pathlib import Path
 
 import numpy as np
+import pytest
 import xarray as xr
+
+from learnclosure.cli import main
+
+QUICK = """
+[closure]
+regressors = ["ridge", "extra-trees"]
+targets = ["linear"]
+[export]
+reference_points = 32
+"""
 
 GRADIENTS = {
     "dye_a": (1e-6, 0.0),
@@ -104,3 +115,10 @@ def write_study(folder: Path, *regions: str, extra: str = "", **splits: str) -> 
     path = folder / "study.toml"
     path.write_text('output = "results"\n' + "\n".join(tables) + extra)
     return path
+
+
+def run_command(*words: object) -> object:
+    """Run the command line in this process and return its exit code."""
+    with pytest.raises(SystemExit) as caught:
+        main([str(word) for word in words])
+    return caught.value.code

@@ -137,6 +137,20 @@ def test_interval_arithmetic_contains_every_tensor_of_the_box() -> None:
     assert (np.abs(turned) / limit).max() > 0.99
 
 
+def test_the_corrected_trace_has_the_true_area_mean_out_of_sample(
+    tables: dict[str, Table],
+) -> None:
+    table = tables["mean-field"]
+    closure = Closure("mean-field", "ridge", "log-cholesky", SETTINGS)
+    closure.fit(table.select(table.region != "cedar"))
+    rest = table.select(table.region == "cedar")
+    trace = [
+        np.average(tensor[:, 0] + tensor[:, 3], weights=rest.weight)
+        for tensor in (closure.predict(rest.inputs).tensor, rest.tensor)
+    ]
+    assert trace[0] == pytest.approx(trace[1], rel=0.05)
+
+
 def test_a_mean_reuses_parts_fitted_to_the_same_points(tables: dict[str, Table]) -> None:
     table = tables["mean-field"].select(np.arange(0, len(tables["mean-field"]), 6))
     for target in ("linear", "log-cholesky"):

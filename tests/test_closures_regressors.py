@@ -146,6 +146,20 @@ def test_a_forest_predicts_alike_for_inputs_that_round_to_the_same_single() -> N
     assert np.array_equal(forest.predict(x), forest.predict(x.astype(np.float32)))
 
 
+def test_boosting_sets_no_threshold_on_a_value_of_the_sample() -> None:
+    # Where one lay on a value, rounding in another runtime would decide the branch.
+    x, y = sample()
+    x[:, 2] = np.round(x[:, 2])
+    weight = np.linspace(0.5, 2.0, len(x))
+    boosting = BoostingRegressor(max_iter=20).fit(x, y, sample_weight=weight)
+    for booster in boosting.boosters_:
+        for (predictor,) in booster._predictors:
+            nodes = predictor.nodes[predictor.nodes["is_leaf"] == 0]
+            for node in nodes:
+                gap = np.abs(x[:, node["feature_idx"]] - node["num_threshold"]).min()
+                assert gap > 1e-9
+
+
 def test_exported_size_of_a_forest_is_bounded() -> None:
     x, y = sample(4000)
     forest = make_regressor("extra-trees", 0).fit(x, y)

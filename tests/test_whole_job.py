@@ -7,35 +7,10 @@ import json
 import numpy as np
 import pytest
 import xarray as xr
-from ensemble_files import write_members, write_study
+from ensemble_files import QUICK, write_members, write_study
+from ensemble_files import run_command as run
 
-from learnclosure.cli import main
 from learnclosure.simulate.exact import exact_plane_wave_tensor
-
-QUICK = """
-[closure]
-regressors = ["ridge", "extra-trees"]
-targets = ["linear"]
-[export]
-reference_points = 32
-"""
-
-
-def run(*words):
-    with pytest.raises(SystemExit) as caught:
-        main([str(word) for word in words])
-    return caught.value.code
-
-
-@pytest.fixture(scope="module")
-def finished(tmp_path_factory):
-    """Run a study over two training regions and a held-out one, once."""
-    folder = tmp_path_factory.mktemp("whole")
-    for number, name in enumerate(("north", "south", "west")):
-        write_members(folder / name, members=5, rows=16, columns=20, seed=number)
-    study = write_study(folder, "north", "south", "west", west="test", extra=QUICK)
-    assert run("run", study) == 0
-    return folder
 
 
 def test_a_run_leaves_every_artefact(finished):

@@ -1,4 +1,4 @@
-"""Run the public ocean model veros on a small invented channel, as its own output routine writes it.
+"""Run the public ocean model veros on a small invented channel and keep what it writes.
 
 The model is not a dependency of learnclosure; see README.md beside this file.
 """
@@ -14,14 +14,14 @@ from typing import Any
 
 import numpy as np
 from veros import VerosSetup, veros_routine
-from veros.core import advection, thermodynamics, utilities
+from veros.core import thermodynamics, utilities
 from veros.core.operators import at, update
 from veros.variables import Variable
 
 MEMBERS = 3
 DAY = 86400.0
 CELL = 20e3
-COLUMNS, ROWS = 20, 16
+COLUMNS, ROWS = 18, 14
 THICKNESS = (1000.0, 600.0, 400.0)
 TRACERS = ("trc_a", "trc_b", "trc_c")
 WRITTEN = [
@@ -99,8 +99,8 @@ class Channel(VerosSetup):  # type: ignore[misc]
         """Set a headland at the southern wall and a ridge across the channel."""
         vs = state.variables
         x, y = np.meshgrid(vs.xt / CELL, vs.yt / CELL, indexing="ij")
-        deepest = np.where(np.abs(x - 13.0) < 2.5, 2, 1)
-        headland = (np.abs(x - 6.0) < 1.8) & (y < 3.2)
+        deepest = np.where(np.abs(x - 12.0) < 2.5, 2, 1)
+        headland = (np.abs(x - 5.0) < 1.8) & (y < 3.2)
         vs.kbot = update(vs.kbot, at[...], np.where(headland, 0, deepest))
 
     @veros_routine
@@ -145,7 +145,7 @@ class Channel(VerosSetup):  # type: ignore[misc]
         for diagnostic in state.diagnostics.values():
             diagnostic.output_frequency = diagnostic.sampling_frequency = 1e12
         snapshot = state.diagnostics["snapshot"]
-        snapshot.output_frequency = 4 * DAY
+        snapshot.output_frequency = 6 * DAY
         snapshot.output_variables = [*WRITTEN, *TRACERS]
 
     @veros_routine

@@ -110,7 +110,7 @@ class Closure:
         target: str,
         settings: ClosureSettings,
         *,
-        weighting: Weighting = "area",
+        weighting: Weighting = "area-and-sampling",
     ) -> None:
         if family not in FALLBACKS:
             raise TrainingError(
@@ -181,7 +181,7 @@ class Closure:
         if self.target_.corrected:
             self._training.held_out = self._held_out(parts)
             scale = np.broadcast_to(prepared.scale, len(table))
-            self.target_.correct_trace(self._training.held_out, trace, scale, weight)
+            self.target_.correct_trace(self._training.held_out, trace, scale, table.weight)
         self.finish(np, list(columns.T), prepared, inputs)
         self.inputs_ = tuple(name for name in table.inputs if name in inputs.asked)
         return self

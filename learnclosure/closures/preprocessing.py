@@ -51,8 +51,8 @@ class ClippedQuantileNormal(TransformerMixin, BaseEstimator):  # type: ignore[mi
     Examples
     --------
     >>> import numpy as np
-    >>> sample = np.arange(101.0)[:, None]
-    >>> scores = ClippedQuantileNormal().fit(sample).transform([[50.0], [1e9]])
+    >>> sample = np.arange(10_001.0)[:, None]
+    >>> scores = ClippedQuantileNormal().fit(sample).transform([[5000.0], [1e9]])
     >>> scores.round(3).ravel().tolist()
     [0.0, 2.326]
     """

@@ -90,7 +90,7 @@ class ForestRegressor(MultiOutputRegressor):
 
     def __init__(
         self,
-        n_estimators: int = 80,
+        n_estimators: int = 60,
         max_leaf_nodes: int = 256,
         min_samples_leaf: int = 5,
         max_features: float = 0.5,
@@ -162,12 +162,8 @@ class BoostingRegressor(MultiOutputRegressor):
         self.random_state = random_state
 
     def _fit(self, matrix: FloatArray, outputs: FloatArray, weights: FloatArray) -> None:
-        # Thresholds fall on values of the sample; in single precision a value that differs
-        # only by rounding does not lie exactly on one.
-        matrix = matrix.astype(np.float32).astype(np.float64)
+        coarse = _coarsened(matrix, weights, self.max_bins)
         self.n_iter_ = self.max_iter
-        # Equal weights change nothing, but weighted binning takes ten times as long.
-        needed = None if np.ptp(weights) == 0.0 else weights
         self.boosters_ = [
             HistGradientBoostingRegressor(
                 max_iter=self.max_iter,
@@ -179,12 +175,29 @@ class BoostingRegressor(MultiOutputRegressor):
                 max_features=self.max_features,
                 early_stopping=False,
                 random_state=self.random_state,
-            ).fit(matrix, column, sample_weight=needed)
+            ).fit(coarse, column, sample_weight=weights)
             for column in outputs.T
         ]
 
     def _predict(self, matrix: FloatArray) -> FloatArray:
         return np.column_stack([booster.predict(matrix) for booster in self.boosters_])
+
+
+def _coarsened(matrix: FloatArray, weights: FloatArray, count: int) -> FloatArray:
+    """Replace each value by the nearest of a few weighted quantiles of its feature.
+
+    Boosting then puts its thresholds midway between these quantiles, not on values of the
+    sample, where rounding would decide; values compare with them as before. It also spares
+    scikit-learn's own weighted binning, which takes ten times as long as the fit.
+    """
+    levels = (np.arange(count) + 0.5) / count
+    quantiles = np.quantile(matrix, levels, axis=0, weights=weights, method="inverted_cdf")
+    result = np.empty_like(matrix)
+    for number, column in enumerate(matrix.T):
+        nearest = np.unique(quantiles[:, number].astype(np.float32).astype(np.float64))
+        middles = 0.5 * (nearest[1:] + nearest[:-1])
+        result[:, number] = nearest[np.searchsorted(middles, column)]
+    return result
 
 
 class PerceptronRegressor(MultiOutputRegressor):
@@ -196,7 +209,7 @@ class PerceptronRegressor(MultiOutputRegressor):
     penalty : float, default 10.0
         Penalty on the squared weights.
     learning_rate : float, default 5e-3
-    epochs : int, default 25
+    epochs : int, default 20
         Passes over the sample; fixed, so that no part of a region serves to stop training.
     batch : int, default 256
         Points per step.
@@ -224,7 +237,7 @@ class PerceptronRegressor(MultiOutputRegressor):
         hidden_layers: tuple[int, ...] = (32, 32),
         penalty: float = 10.0,
         learning_rate: float = 5e-3,
-        epochs: int = 25,
+        epochs: int = 20,
         batch: int = 256,
         random_state: int = 0,
     ) -> None:

@@ -10,23 +10,38 @@ from typing import Any
 
 import numpy as np
 import numpy.typing as npt
-import xarray as xr
 
-from learnclosure.ensemble.axes import check_faces, find_axes, to_centres
+from learnclosure.ensemble.agreement import check_grids_alike, check_members_alike
+from learnclosure.ensemble.assembly import build_grid
+from learnclosure.ensemble.axes import (
+    ALONG,
+    Cells,
+    between_cells,
+    check_points,
+    find_axes,
+    to_centres,
+)
+from learnclosure.ensemble.conversions import find_conversions, read_times
 from learnclosure.ensemble.grid import Grid
-from learnclosure.ensemble.layout import LayoutReader, build_grid
+from learnclosure.ensemble.layout import LayoutReader
 from learnclosure.ensemble.roles import find_roles
-from learnclosure.ensemble.sources import Member, content_digest, find_files, open_members
+from learnclosure.ensemble.sources import (
+    Member,
+    content_digest,
+    find_files,
+    first_line,
+    open_members,
+)
 from learnclosure.ensemble.stratification import buoyancy_rule
-from learnclosure.ensemble.units import Conversion, conversion, tracer_conversion
-from learnclosure.errors import GridError, SourceError
+from learnclosure.ensemble.vertical import is_top_last
+from learnclosure.errors import SourceError
 from learnclosure.study import EnsembleTable
 
 FloatArray = npt.NDArray[np.float64]
 BoolArray = npt.NDArray[np.bool_]
 
-SECONDS_PER_DAY = 86400.0
-BLOCK_BYTES = 64e6
+BLOCK_BYTES = 128e6
+"""Bytes kept of the files at a time, in their own precision."""
 
 
 class Ensemble:
@@ -58,7 +73,7 @@ class Ensemble:
         self._table = table
         self._folder = folder
         self._stack = ExitStack()
-        self._block: dict[tuple[int | str, str], npt.NDArray[Any]] = {}
+        self._block: dict[tuple[Path, str], npt.NDArray[Any]] = {}
         self._block_start = -1
         try:
             self._open(table, folder)
@@ -73,20 +88,24 @@ class Ensemble:
         self.tracers = self.roles.tracers
         self.withheld_tracers = self.roles.withheld_tracers
         self.axes = find_axes(table, first.dataset, self.tracers[0], first.dimension, first.path)
-        check_faces(table.grid, first.dataset, self.roles, self.axes, first.path)
-        self._check_alike()
+        check_points(table.grid, first.dataset, self.roles, self.axes, first.path)
+        check_members_alike(self.members, self.roles.fields, self.axes.time)
         layout = LayoutReader(table, first.dataset, self.axes, first.path)
-        self._top_last = layout.top_last()
-        self._periodic = layout.periodic()
-        self._conversions, self.units_before = self._find_units(first)
-        self.units = {name: change.units for name, change in self._conversions.items()}
-        self.times = self._read_times(first)
+        self._top_last = is_top_last(layout)
+        self._cells = Cells(layout.rows, layout.columns, *layout.periodic())
+        self._conversions = find_conversions(self.roles, first, layout.assumptions)
+        self.units_before = self._conversions.before
+        self.units = self._conversions.units
+        self.times = read_times(layout)
         self.grid: Grid = build_grid(layout, self._find_mask(first), self._top_last)
+        check_grids_alike(self.members, layout.used, self.axes.time)
         self.member_labels = tuple(member.label for member in self.members)
-        notes = list(dict.fromkeys(layout.assumptions))
-        self._buoyancy_rule = buoyancy_rule(table, self.roles, self.grid, notes)
+        notes = [*layout.assumptions, *self._find_walls(first)]
+        name = self.roles.temperature
+        known = str(first.dataset[name].attrs.get("standard_name", "")) if name else ""
+        self._buoyancy_rule = buoyancy_rule(table, self.roles, self.grid, known, notes)
         self.has_buoyancy = self.roles.buoyancy is not None or self._buoyancy_rule is not None
-        self.assumptions = tuple(notes)
+        self.assumptions = tuple(dict.fromkeys(notes))
 
     def __enter__(self) -> Ensemble:
         return self
@@ -107,26 +126,6 @@ class Ensemble:
     def input_sha256(self) -> str:
         """SHA-256 over names and contents of all files."""
         return content_digest(find_files(self._table, self._folder))
-
-    @property
-    def _stratifying(self) -> dict[str, str]:
-        """Variables the stratification comes from, by part."""
-        if self.roles.buoyancy is not None:
-            return {"buoyancy": self.roles.buoyancy}
-        parts = {"temperature": self.roles.temperature, "salinity": self.roles.salinity}
-        return {part: name for part, name in parts.items() if name is not None}
-
-    @property
-    def variable_names(self) -> tuple[str, ...]:
-        """All variables read, by their names in the files, each once."""
-        names = (
-            self.roles.x_velocity,
-            self.roles.y_velocity,
-            *self.tracers,
-            *self.withheld_tracers,
-            *self._stratifying.values(),
-        )
-        return tuple(dict.fromkeys(names))
 
     def fields(self, time: int) -> dict[str, FloatArray]:
         """Read all members of one time.
@@ -155,96 +154,71 @@ class Ensemble:
         return {name: np.stack(values) for name, values in found.items()}
 
     def _member_fields(self, member: Member, time: int) -> dict[str, FloatArray]:
-        result: dict[str, FloatArray] = {}
         mask = self.grid.geometry.mask
-        rows, columns = mask.shape[1:]
-        for part, size, periodic in (
-            ("x_velocity", columns, self._periodic[0]),
-            ("y_velocity", rows, self._periodic[1]),
-        ):
-            name = getattr(self.roles, part)
-            face = self._table.grid.faces.get(part)  # type: ignore[call-overload]
-            values = self._read(member, name, time)
-            if face in (None, "center"):
-                self._require_sea(values, member, name, time)
-            centred = to_centres(values, face, size, periodic)
-            result[part] = np.where(mask, self._conversions[name](centred), 0.0)
-        raw: dict[str, FloatArray] = {}
-        for name in (*self.tracers, *self.withheld_tracers, *self._stratifying.values()):
-            if name not in raw:
-                raw[name] = self._scalar(member, name, time)
+        result = {part: self._velocity(member, part, time) for part in ("x_velocity", "y_velocity")}
+        raw = {name: self._scalar(member, name, time) for name in self.roles.scalars}
         for name in (*self.tracers, *self.withheld_tracers):
-            result[name] = raw[name]
+            result[name] = np.where(mask, self._conversions.tracers[name](raw[name]), 0.0)
         if self.has_buoyancy:
-            parts = {part: raw[name] for part, name in self._stratifying.items()}
-            result["buoyancy"] = self._buoyancy(parts)
+            parts = {
+                part: np.where(mask, self._conversions.stratifying[part](raw[name]), 0.0)
+                for part, name in self.roles.stratifying.items()
+            }
+            if self._buoyancy_rule is None:
+                result["buoyancy"] = parts["buoyancy"]
+            else:
+                values = self._buoyancy_rule(parts["temperature"], parts.get("salinity"))
+                result["buoyancy"] = np.where(mask, values, 0.0)
         return result
 
-    def _scalar(self, member: Member, name: str, time: int) -> FloatArray:
+    def _face(self, part: str) -> str | None:
+        face = self._table.grid.faces.get(part)  # type: ignore[call-overload]
+        return str(face) if face in ALONG else None
+
+    def _velocity(self, member: Member, part: str, time: int) -> FloatArray:
+        """Read a velocity at cell centres, zero on land."""
+        name, face = getattr(self.roles, part), self._face(part)
         values = self._read(member, name, time)
-        self._require_sea(values, member, name, time)
-        return np.where(self.grid.geometry.mask, self._conversions[name](values), 0.0)
-
-    def _buoyancy(self, parts: dict[str, FloatArray]) -> FloatArray:
-        if self._buoyancy_rule is None:
-            return parts["buoyancy"]
-        values = self._buoyancy_rule(parts["temperature"], parts.get("salinity"))
-        return np.where(self.grid.geometry.mask, values, 0.0)
-
-    def _read(self, member: Member, name: str, time: int) -> FloatArray:
-        """Read one field of one member, (layer, y, x), the top layer first."""
-        if self.axes.time is None:
-            values = self._load(member, name, None)
+        finite = np.isfinite(values)
+        if face is None:
+            self._require(self.grid.geometry.mask, finite, member, name, time)
         else:
-            start = time - time % self._block_times
-            if start != self._block_start:
-                self._block.clear()
-                self._block_start = start
-            key = (member.label, name)
-            if key not in self._block:
-                self._block[key] = self._load(member, name, slice(start, start + self._block_times))
-            values = self._block[key][time - start]
-        values = values.astype(np.float64)
-        if self.axes.layer is None:
-            values = values[None]
-        return values[::-1] if self._top_last else values
+            self._require(self._open_faces[part], finite, member, name, time)
+            self._refuse_stray(self._walls[part] & finite, member, name, time)
+        centred = to_centres(values, face, self._cells)
+        return np.where(self.grid.geometry.mask, self._conversions.velocities[part](centred), 0.0)
 
-    def _load(self, member: Member, name: str, times: slice | None) -> npt.NDArray[Any]:
-        """Read one variable of one member at some times, in the files' own precision."""
-        variable = member.dataset.variables[name]
-        place: dict[str, Any] = {}
-        if self.axes.time is not None and times is not None:
-            place[self.axes.time] = times
-        if member.dimension is not None:
-            place[member.dimension] = member.index
-        try:
-            return np.asarray(variable.isel(place).values)
-        except (OSError, ValueError, RuntimeError, KeyError) as error:
+    def _scalar(self, member: Member, name: str, time: int) -> FloatArray:
+        """Read a field at cell centres as the files have it, checked against the mask."""
+        values = self._read(member, name, time)
+        finite, mask = np.isfinite(values), self.grid.geometry.mask
+        self._require(mask, finite, member, name, time)
+        if name in self.tracers:
+            self._refuse_stray(finite & ~mask, member, name, time)
+        return values
+
+    def _refuse_stray(self, stray: BoolArray, member: Member, name: str, time: int) -> None:
+        count = int(np.count_nonzero(stray))
+        if count:
             raise SourceError(
-                f"cannot be read: {str(error).splitlines()[0]}",
+                "values stand where the first member has land",
                 where=member.where(name),
-                remedy="replace the file; it may be cut short or damaged",
-            ) from None
+                found=f"{count} at time number {time}",
+                expected=f"the land of {self.members[0].path} in every member and at every time",
+                remedy="mask the same cells in all members, times and tracers",
+            )
 
-    @cached_property
-    def _block_times(self) -> int:
-        """Times read at once: opening a variable costs more than reading a small field."""
-        variable = self.members[0].dataset[self.tracers[0]]
-        count = variable.sizes[self.axes.time] if self.axes.time is not None else 1
-        one = variable.nbytes / max(count, 1) * len(self.variable_names)
-        if self.members[0].dimension is None:
-            one *= len(self.members)
-        return int(max(1, min(count, BLOCK_BYTES // max(one, 1))))
-
-    def _require_sea(self, values: FloatArray, member: Member, name: str, time: int) -> None:
-        missing = int(np.count_nonzero(self.grid.geometry.mask & ~np.isfinite(values)))
+    def _require(
+        self, needed: BoolArray, finite: BoolArray, member: Member, name: str, time: int
+    ) -> None:
+        missing = int(np.count_nonzero(needed & ~finite))
         if missing:
             raise SourceError(
                 "values are missing in the sea",
                 where=member.where(name),
                 found=f"{missing} that are not finite at time number {time}",
-                expected="finite values wherever the tracers are sea",
-                remedy="repair the file, or mask the same cells in all members and times",
+                expected="finite values wherever a tracer of the first member has one",
+                remedy="repair the file, or mask the same cells in all members, times and fields",
             )
 
     def _find_mask(self, first: Member) -> BoolArray:
@@ -252,102 +226,68 @@ class Ensemble:
         fields = [np.isfinite(self._read(first, name, 0)) for name in self.tracers]
         return np.asarray(np.any(fields, axis=0))
 
-    def _find_units(self, first: Member) -> tuple[dict[str, Conversion], dict[str, str]]:
-        velocities = (self.roles.x_velocity, self.roles.y_velocity)
-        wanted = dict.fromkeys(velocities, "m s-1")
-        kinds = {"buoyancy": "m s-2", "temperature": "K", "salinity": "g kg-1"}
-        tracers = (*self.tracers, *self.withheld_tracers)
-        for part, name in self._stratifying.items():
-            if name not in tracers:
-                wanted[name] = kinds[part]
-        found: dict[str, Conversion] = {}
-        before: dict[str, str] = {}
-        for name in self.variable_names:
-            said = str(first.dataset[name].attrs.get("units", ""))
-            before[name] = said
-            if name in wanted:
-                found[name] = conversion(said, wanted[name], first.where(name))
-            else:
-                found[name] = tracer_conversion(said, first.where(name))
-        return found, before
-
-    def _read_times(self, first: Member) -> FloatArray:
-        name = self.axes.time
-        if name is None:
-            return np.zeros(1)
-        count = first.dataset.sizes[name]
-        if name not in first.dataset.variables:
-            return np.arange(count, dtype=np.float64)
-        variable = first.dataset[name]
-        unit = str(variable.attrs.get("units", "days")).split(" since ")[0]
-        change = conversion(unit, "s", first.where(name))
-        return change(np.asarray(variable.values, dtype=np.float64)) / SECONDS_PER_DAY
-
-    def _check_alike(self) -> None:
-        """Refuse members whose variables, grid or times differ from the first one's."""
-        first = self.members[0]
-        for member in self.members[1:]:
-            if member.dataset is first.dataset:
+    def _find_walls(self, first: Member) -> list[str]:
+        """Tell open faces from walls: those between sea cells that hold no velocity."""
+        self._open_faces: dict[str, BoolArray] = {}
+        self._walls: dict[str, BoolArray] = {}
+        notes = []
+        for part in ("x_velocity", "y_velocity"):
+            face = self._face(part)
+            if face is None:
                 continue
-            for name in self.variable_names:
-                self._check_variable(first, member, name)
-            for name in {
-                str(dim) for var in self.variable_names for dim in first.dataset[var].dims
-            }:
-                if name == member.dimension:
-                    continue
-                _check_coordinate(first, member, name)
+            name = getattr(self.roles, part)
+            finite = np.isfinite(self._read(first, name, 0))
+            points = finite.shape[self._cells.along(face)[0]]
+            inner = between_cells(self.grid.geometry.mask, face, points, self._cells)
+            self._open_faces[part], self._walls[part] = inner & finite, inner & ~finite
+            count = int(np.count_nonzero(self._walls[part]))
+            if count:
+                notes.append(
+                    f"{count} faces between sea cells are walls, since '{name}' is missing there"
+                )
+        return notes
 
-    def _check_variable(self, first: Member, member: Member, name: str) -> None:
-        if name not in member.dataset.variables:
+    def _read(self, member: Member, name: str, time: int) -> FloatArray:
+        """Read one field of one member, (layer, y, x), the top layer first."""
+        start = time - time % self._block_times
+        if start != self._block_start:
+            self._block.clear()
+            self._block_start = start
+        key = (member.path, name)
+        if key not in self._block:
+            self._block[key] = self._load(member, name, start)
+        block = self._block[key]
+        values = np.asarray(block[member.index, time - start], dtype=np.float64)
+        return values[::-1] if self._top_last else values
+
+    def _load(self, member: Member, name: str, start: int) -> npt.NDArray[Any]:
+        """Read one variable at some times: (member, time, layer, y, x) in its own precision."""
+        variable = member.dataset.variables[name]
+        time, layer = self.axes.time, self.axes.layer
+        place = {} if time is None else {time: slice(start, start + self._block_times)}
+        lead = [dim for dim in (member.dimension, time) if dim is not None]
+        try:
+            part = variable.isel(place).transpose(*lead, ...)
+            values = np.asarray(part.values)
+        except (OSError, ValueError, RuntimeError, KeyError) as error:
             raise SourceError(
-                "a variable is missing",
+                f"cannot be read: {first_line(error)}",
                 where=member.where(name),
-                expected=f"the variables of {first.path}",
-                remedy="repair or remove this member",
-            )
-        here, there = member.dataset[name], first.dataset[name]
-        if here.dims != there.dims or any(
-            here.sizes[dim] != there.sizes[dim] for dim in here.dims if dim != member.dimension
-        ):
-            kind = GridError if here.dims == there.dims else SourceError
-            raise kind(
-                "members differ in their dimensions",
-                where=member.where(name),
-                found=dict(here.sizes),
-                expected=f"{dict(there.sizes)} as in {first.path}",
-                remedy="give members on one grid with the same times",
-            )
-        if here.attrs.get("units") != there.attrs.get("units"):
-            raise SourceError(
-                "members differ in their units",
-                where=member.where(name),
-                found=repr(here.attrs.get("units")),
-                expected=f"{there.attrs.get('units')!r} as in {first.path}",
-                remedy="give all members in one unit",
-            )
+                remedy="replace the file; it may be cut short or damaged",
+            ) from None
+        absent = [axis for axis, dim in enumerate((member.dimension, time, layer)) if dim is None]
+        return np.expand_dims(values, absent)
 
-
-def _check_coordinate(first: Member, member: Member, name: str) -> None:
-    """Refuse a coordinate that differs at all: a shifted grid would be misread silently."""
-    if name not in first.dataset.variables:
-        return
-    here: xr.Variable | None = member.dataset.variables.get(name)
-    there = first.dataset.variables[name]
-    if here is None or not np.array_equal(here.values, there.values, equal_nan=True):
-        what = "grids" if np.ndim(there.values) and "time" not in name.lower() else "times"
-        raise GridError(
-            f"members lie on different {what}",
-            where=member.where(name),
-            found="no such coordinate" if here is None else _largest_difference(here, there),
-            expected=f"the values in {first.path}",
-            remedy="give members on one grid with the same times",
-        )
-
-
-def _largest_difference(here: xr.Variable, there: xr.Variable) -> str:
-    difference = np.abs(np.asarray(here.values, float) - np.asarray(there.values, float))
-    return f"values that differ by up to {np.nanmax(difference):g}"
+    @cached_property
+    def _block_times(self) -> int:
+        """Times read at once: opening a variable costs more than reading a small field."""
+        first = self.members[0]
+        variable = first.dataset[self.tracers[0]]
+        count = variable.sizes[self.axes.time] if self.axes.time is not None else 1
+        one = variable.nbytes / max(count, 1) * len(self.roles.fields)
+        if first.dimension is None:
+            one *= len(self.members)
+        return int(max(1, min(count, BLOCK_BYTES // max(one, 1))))
 
 
 def open_ensemble(table: EnsembleTable, folder: Path | str = ".") -> Ensemble:

@@ -14,6 +14,18 @@ STANDARD_NAMES = {
     "x_velocity": ("sea_water_x_velocity", "eastward_sea_water_velocity"),
     "y_velocity": ("sea_water_y_velocity", "northward_sea_water_velocity"),
 }
+SCALAR_STANDARD_NAMES = {
+    "temperature": (
+        "sea_water_conservative_temperature",
+        "sea_water_potential_temperature",
+        "sea_water_temperature",
+    ),
+    "salinity": (
+        "sea_water_absolute_salinity",
+        "sea_water_practical_salinity",
+        "sea_water_salinity",
+    ),
+}
 LEAST_TRACERS = 2
 
 
@@ -36,6 +48,25 @@ class Roles:
     buoyancy: str | None
     temperature: str | None
     salinity: str | None
+
+    @property
+    def stratifying(self) -> dict[str, str]:
+        """Variables the stratification comes from, by part."""
+        if self.buoyancy is not None:
+            return {"buoyancy": self.buoyancy}
+        parts = {"temperature": self.temperature, "salinity": self.salinity}
+        return {part: name for part, name in parts.items() if name is not None}
+
+    @property
+    def scalars(self) -> tuple[str, ...]:
+        """All fields at cell centres, each once, tracers first."""
+        names = (*self.tracers, *self.withheld_tracers, *self.stratifying.values())
+        return tuple(dict.fromkeys(names))
+
+    @property
+    def fields(self) -> tuple[str, ...]:
+        """All fields read, each once."""
+        return tuple(dict.fromkeys((self.x_velocity, self.y_velocity, *self.scalars)))
 
 
 def _fields(dataset: xr.Dataset) -> list[str]:
@@ -135,12 +166,12 @@ def find_roles(table: EnsembleTable, dataset: xr.Dataset, where: object) -> Role
     for part, listed in (("tracers", tracers), ("withheld_tracers", withheld)):
         for name in listed:
             require_variable(dataset, name, f"[ensemble.variables] {part}", where)
-    both = sorted(set(tracers) & set(withheld))
-    if both:
+    twice = [name for name in tracers if (*tracers, *withheld).count(name) > 1]
+    if twice:
         raise RoleError(
-            "a tracer is both used and withheld",
-            where=f"{where}: {both[0]}",
-            remedy="name it under 'tracers' or under 'withheld_tracers'",
+            "a tracer is named twice",
+            where=f"{where}: {twice[0]}",
+            remedy="name it once, under 'tracers' or under 'withheld_tracers'",
         )
     if len(tracers) < LEAST_TRACERS:
         others = [name for name in _fields(dataset) if name not in (x_velocity, y_velocity)]
@@ -156,8 +187,19 @@ def find_roles(table: EnsembleTable, dataset: xr.Dataset, where: object) -> Role
         named = getattr(names, part)
         if named is not None:
             require_variable(dataset, named, f"[ensemble.variables] {part}", where)
+        elif table.seawater is not None:
+            named = _known_scalar(dataset, part)
         optional[part] = named
     return Roles(x_velocity, y_velocity, tuple(tracers), tuple(withheld), **optional)
+
+
+def _known_scalar(dataset: xr.Dataset, part: str) -> str | None:
+    """Temperature or salinity by standard name, where a study asks for seawater."""
+    for standard_name in SCALAR_STANDARD_NAMES.get(part, ()):
+        for name in _fields(dataset):
+            if dataset[name].attrs.get("standard_name") == standard_name:
+                return name
+    return None
 
 
 def _with_tracer_role(dataset: xr.Dataset, role: str) -> tuple[str, ...]:

@@ -4,11 +4,11 @@ from __future__ import annotations
 
 import glob
 import hashlib
-import re
 from collections.abc import Iterator, Sequence
 from contextlib import ExitStack
 from dataclasses import dataclass
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import xarray as xr
@@ -47,6 +47,20 @@ class Member:
     def where(self, variable: str) -> str:
         """Return file and variable for a message."""
         return f"{self.path}: {variable}"
+
+
+def first_line(error: Exception) -> str:
+    """Return the first line of another library's message.
+
+    Parameters
+    ----------
+    error : Exception
+
+    Returns
+    -------
+    str
+    """
+    return next(iter(str(error).splitlines()), type(error).__name__).rstrip(".")
 
 
 def _is_zarr(path: Path) -> bool:
@@ -135,10 +149,12 @@ def _open(path: Path, stack: ExitStack) -> xr.Dataset:
                 where=path,
                 remedy="narrow the pattern or convert the file",
             )
-        dataset = xr.open_dataset(path, engine=engine, decode_times=False, cache=False)
+        # Stores lie on a local disk: metadata gathered in one place saves nothing there.
+        options: dict[str, Any] = {"consolidated": False} if engine == "zarr" else {}
+        dataset = xr.open_dataset(path, engine=engine, decode_times=False, cache=False, **options)
     except (OSError, ValueError, KeyError, RuntimeError, TypeError) as error:
         raise SourceError(
-            f"cannot be read as NetCDF or Zarr: {str(error).splitlines()[0] if str(error) else ''}",
+            f"cannot be read as NetCDF or Zarr: {first_line(error)}",
             where=path,
             remedy="replace the file; it may be cut short or damaged",
         ) from None
@@ -164,28 +180,29 @@ def _member_dimension(dataset: xr.Dataset, named: str | None, path: Path) -> str
     return None
 
 
-def _own_label(dataset: xr.Dataset, path: Path, number: int) -> int | str:
-    """Label from a scalar realization, else from the digits in the file name."""
+def _own_label(dataset: xr.Dataset, number: int | str) -> int | str:
+    """Label from a scalar realization, else from the file's name or number."""
     for name, variable in dataset.variables.items():
         known = variable.attrs.get("standard_name") == "realization" or name == "realization"
         if known and variable.size == 1:
             return int(np.asarray(variable.values).ravel()[0])
-    digits = re.findall(r"\d+", path.stem)
-    return f"{path.stem}" if digits else number
+    return number
 
 
-def _members_of(path: Path, dataset: xr.Dataset, named: str | None, first: int) -> Iterator[Member]:
+def _members_of(
+    path: Path, dataset: xr.Dataset, named: str | None, label: int | str
+) -> Iterator[Member]:
     dimension = _member_dimension(dataset, named, path)
     if dimension is None:
-        yield Member(_own_label(dataset, path, first), path, dataset)
+        yield Member(_own_label(dataset, label), path, dataset)
         return
     labels = (
         dataset[dimension].values.tolist()
         if dimension in dataset.coords
         else list(range(dataset.sizes[dimension]))
     )
-    for index, label in enumerate(labels):
-        yield Member(label, path, dataset, dimension, index)
+    for index, own in enumerate(labels):
+        yield Member(own, path, dataset, dimension, index)
 
 
 def open_members(table: EnsembleTable, folder: Path, stack: ExitStack) -> list[Member]:
@@ -208,9 +225,12 @@ def open_members(table: EnsembleTable, folder: Path, stack: ExitStack) -> list[M
         If a file cannot be read, there is one member only, or two have one label.
     """
     members: list[Member] = []
-    for path in find_files(table, folder):
+    paths = find_files(table, folder)
+    stems = {path.stem for path in paths}
+    for number, path in enumerate(paths):
         dataset = _open(path, stack)
-        members += _members_of(path, dataset, table.grid.member, len(members))
+        label = path.stem if len(stems) == len(paths) else number
+        members += _members_of(path, dataset, table.grid.member, label)
     if len(members) < 2:
         raise SourceError(
             "one member is no ensemble",

@@ -10,6 +10,7 @@ import numpy.typing as npt
 
 from learnclosure.ensemble.grid import Grid
 from learnclosure.ensemble.roles import Roles
+from learnclosure.ensemble.rotation import EARTH_ROTATION
 from learnclosure.errors import RoleError
 from learnclosure.study import EnsembleTable, Seawater
 
@@ -20,6 +21,11 @@ GRAVITY = 9.81
 REFERENCE_DENSITY = 1025.0
 FREEZING_POINT_OF_WATER = 273.15
 SALINITY_OF_REFERENCE = 35.0
+KINDS = {
+    "sea_water_conservative_temperature": "conservative",
+    "sea_water_potential_temperature": "potential",
+    "sea_water_temperature": "in-situ",
+}
 
 
 def _linear(seawater: Seawater, where: str) -> BuoyancyRule:
@@ -41,17 +47,10 @@ def _linear(seawater: Seawater, where: str) -> BuoyancyRule:
     return rule
 
 
-def _teos10(seawater: Seawater, grid: Grid, latitude: float, where: str) -> BuoyancyRule:
-    if seawater.temperature_kind is None:
-        raise RoleError(
-            "the kind of temperature is unknown",
-            where=where,
-            expected="conservative, potential or in-situ",
-            remedy="set 'temperature_kind' under [ensemble.seawater]",
-        )
-    kind = seawater.temperature_kind
+def _teos10(kind: str, grid: Grid) -> BuoyancyRule:
     middle = np.cumsum(grid.layer_thickness, axis=0) - 0.5 * grid.layer_thickness
-    pressure = gsw.p_from_z(-middle, latitude)
+    sine = np.clip(0.5 * grid.coriolis_parameter / EARTH_ROTATION, -1.0, 1.0)
+    pressure = gsw.p_from_z(-middle, np.degrees(np.arcsin(sine)))
 
     def rule(temperature: FloatArray, salinity: FloatArray | None) -> FloatArray:
         celsius = temperature - FREEZING_POINT_OF_WATER
@@ -65,8 +64,25 @@ def _teos10(seawater: Seawater, grid: Grid, latitude: float, where: str) -> Buoy
     return rule
 
 
+def _temperature_kind(seawater: Seawater, standard_name: str, where: str) -> str:
+    """Return the kind of temperature the study names, else the one CF attributes tell."""
+    kind = seawater.temperature_kind or KINDS.get(standard_name)
+    if kind is None:
+        raise RoleError(
+            "the kind of temperature is unknown",
+            where=where,
+            expected="conservative, potential or in-situ",
+            remedy="set 'temperature_kind' under [ensemble.seawater]",
+        )
+    return kind
+
+
 def buoyancy_rule(
-    table: EnsembleTable, roles: Roles, grid: Grid, assumptions: list[str]
+    table: EnsembleTable,
+    roles: Roles,
+    grid: Grid,
+    temperature_name: str,
+    assumptions: list[str],
 ) -> BuoyancyRule | None:
     """Choose how buoyancy follows from temperature and salinity.
 
@@ -75,14 +91,16 @@ def buoyancy_rule(
     table : EnsembleTable
     roles : Roles
     grid : Grid
+    temperature_name : str
+        CF standard name of the temperature, empty if it has none.
     assumptions : list of str
         What is assumed is added here.
 
     Returns
     -------
     callable or None
-        Takes temperature in K and salinity in g kg-1 and returns buoyancy in m s-2; None
-        if no temperature is named or buoyancy itself is given.
+        Takes temperature in K and absolute salinity in g kg-1 and returns buoyancy in
+        m s-2; None if no temperature is named or buoyancy itself is given.
 
     Raises
     ------
@@ -100,22 +118,29 @@ def buoyancy_rule(
             remedy="add [ensemble.seawater] with 'equation' and what belongs to it",
         )
     if seawater.equation == "linear":
+        rule = _linear(seawater, where)
         assumptions.append(
             f"buoyancy by a linear equation of state, thermal expansion "
             f"{seawater.thermal_expansion} K-1, haline contraction "
             f"{seawater.haline_contraction} kg g-1"
         )
-        return _linear(seawater, where)
+        if roles.salinity is None and seawater.haline_contraction > 0.0:
+            raise RoleError(
+                "haline contraction needs a salinity",
+                where=where,
+                remedy="name 'salinity' under [ensemble.variables]",
+            )
+        return rule
     if roles.salinity is None:
         raise RoleError(
             "buoyancy by TEOS-10 needs a salinity",
             where=where,
             remedy="name 'salinity' under [ensemble.variables]",
         )
-    given = table.grid.latitude
-    latitude = given if isinstance(given, float) else 45.0
+    kind = _temperature_kind(seawater, temperature_name, where)
     assumptions.append(
-        "buoyancy from potential density referenced to the surface (TEOS-10), salinity taken "
-        f"as absolute, {seawater.temperature_kind} temperature"
+        f"buoyancy from potential density referenced to the surface (TEOS-10), {kind} temperature"
     )
-    return _teos10(seawater, grid, latitude, where)
+    if kind == "in-situ":
+        assumptions.append("pressure at resting depth and the latitude of the Coriolis parameter")
+    return _teos10(kind, grid)

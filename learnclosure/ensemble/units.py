@@ -42,6 +42,12 @@ TRAPS = {
 }
 
 
+SCALE = re.compile(r"\s*([0-9.]+(?:[eE][+-]?[0-9]+)?)(?![\w/])\s*")
+"""A number in front of a unit, as in ``1e-3`` or ``1e6 m3 s-1``."""
+
+REFERENCE_SALINITY_PER_PRACTICAL = 35.16504 / 35.0
+
+
 class Conversion(NamedTuple):
     """Multiply by ``factor``, then add ``offset``, to come to ``units``.
 
@@ -87,39 +93,47 @@ def _pint_spelling(text: str) -> str:
     return re.sub(r"(?<=[\w)])[ .](?=[A-Za-z])", "*", powers)
 
 
-def parse_unit(text: str, where: str) -> pint.Unit:
-    """Read a unit.
+def _attempts(spelling: str) -> tuple[str, ...]:
+    """Spellings to try: names of units, but not their symbols, may be in capitals."""
+    words = re.findall(r"[A-Za-z]+", spelling)
+    if all(len(word) > 2 for word in words):
+        return spelling, spelling.lower()
+    return (spelling,)
 
-    Parameters
-    ----------
-    text : str
-        As a file gives it.
-    where : str
-        File and variable, for the message.
 
-    Returns
-    -------
-    pint.Unit
-
-    Raises
-    ------
-    UnitError
-        If the unit is unknown or a known trap.
-    """
+def _parse(text: str, where: str) -> tuple[float, pint.Unit]:
+    """Read a unit as a number times a unit pint knows; see :func:`parse_unit`."""
     trap = TRAPS.get(text.strip().lower())
-    spelling = _pint_spelling(text)
-    # Names of units, but not their symbols, may be written in capitals.
-    for attempt in () if trap else (spelling, spelling.lower()):
+    scaled = SCALE.match(text)
+    scale, rest = (float(scaled[1]), text[scaled.end() :]) if scaled else (1.0, text)
+    for attempt in () if trap else _attempts(_pint_spelling(rest)):
         try:
-            return _registry().parse_units(attempt)
+            return scale, _registry().parse_units(attempt)
         except (pint.PintError, ValueError, TypeError, AttributeError, SyntaxError):
-            trap = "correct the units attribute of the variable"
+            continue
     raise UnitError(
         "unknown unit",
         where=where,
         found=repr(text),
         expected="a unit UDUNITS knows, such as 'm s-1', 'degC' or '1'",
-        remedy=trap,
+        remedy=trap or "correct the units attribute of the variable",
+    )
+
+
+def measures_angle(text: str) -> bool:
+    """Tell whether a unit is spelled as an angle; a pure number is none.
+
+    Parameters
+    ----------
+    text : str
+
+    Returns
+    -------
+    bool
+    """
+    return (
+        re.match(r"deg(rees?)?(_?(north|east|n|e))?$|rad(ian)?s?$", text.strip().lower())
+        is not None
     )
 
 
@@ -151,10 +165,11 @@ def conversion(text: str, target: str, where: str) -> Conversion:
     >>> conversion("deg C", "K", "file: temp").offset
     273.15
     """
-    unit, wanted = parse_unit(text, where), parse_unit(target, where)
+    scale, unit = _parse(text, where)
+    wanted = _parse(target, where)[1]
     try:
         zero = _registry().Quantity(0.0, unit).to(wanted).magnitude
-        one = _registry().Quantity(1.0, unit).to(wanted).magnitude
+        one = _registry().Quantity(scale, unit).to(wanted).magnitude
     except pint.DimensionalityError:
         raise UnitError(
             "a unit measures something else",
@@ -184,13 +199,43 @@ def tracer_conversion(text: str, where: str) -> Conversion:
     UnitError
         If the unit is unknown.
     """
-    unit = parse_unit(text, where)
+    _, unit = _parse(text, where)
     if unit.is_compatible_with("kelvin"):
         return conversion(text, "K", where)
     plain = text.strip()
     if SPELLINGS.get(plain) == "dimensionless":
         return Conversion(1.0, 0.0, "1")
     return Conversion(1.0, 0.0, re.sub(r"/([A-Za-z]+)(\d*)", _as_factor, plain))
+
+
+def salinity_conversion(text: str, standard_name: str, where: str) -> tuple[Conversion, bool]:
+    """Find how a salinity is brought to absolute salinity in g kg-1.
+
+    Practical salinity is a pure number near 35; it is told by its standard name or by
+    the unit ``1`` and turned into reference salinity (Millero et al. 2008, Deep-Sea
+    Research I 55).
+
+    Parameters
+    ----------
+    text, standard_name : str
+        Attributes of the variable.
+    where : str
+
+    Returns
+    -------
+    Conversion, bool
+        The conversion and whether the salinity is a practical one.
+
+    Raises
+    ------
+    UnitError
+        If the unit is unknown or no share of mass.
+    """
+    practical = SPELLINGS.get(text.strip()) == "dimensionless"
+    if practical or standard_name == "sea_water_practical_salinity":
+        _parse(text, where)
+        return Conversion(REFERENCE_SALINITY_PER_PRACTICAL, 0.0, "g kg-1"), True
+    return conversion(text, "g kg-1", where), False
 
 
 def _as_factor(quotient: re.Match[str]) -> str:

@@ -11,16 +11,23 @@ import xarray as xr
 PAIRS = ("xx", "xy", "yx", "yy")
 FOLD_KINDS = ("random", "blocked", "region")
 MISSING = "–"
+MOST_LAYERS = 3
+"""Of more layers than this only the ends and the mean are written."""
 
 
 def layers(values: Sequence[Any] | None, digits: int = 2) -> str:
-    """Write one number a layer, from the top."""
+    """Write one number a layer, from the top; of many layers the ends and the mean."""
     if values is None:
         return MISSING
-    return " / ".join(
+    written = [
         MISSING if value is None or not np.isfinite(value) else f"{value:.{digits}f}"
         for value in values
-    )
+    ]
+    if len(written) <= MOST_LAYERS:
+        return " / ".join(written)
+    known = [value for value in values if value is not None and np.isfinite(value)]
+    mean = f"{np.mean(known):.{digits}f}" if known else MISSING
+    return f"{written[0]} … {written[-1]}, mean {mean}"
 
 
 def number(value: Any) -> str:
