@@ -3,7 +3,10 @@
 from __future__ import annotations
 
 import dataclasses
+import os
 import re
+import subprocess
+import sys
 
 import h5netcdf
 import numpy as np
@@ -158,3 +161,26 @@ def test_a_failure_in_one_region_stops_the_other_and_is_told(tmp_path):
     with pytest.raises(SimulationError, match=r"tansy: day 1: .* too fast"):
         simulate_regions(regimes, tmp_path, members=1, snapshots=4000, workers=2)
     assert list(tmp_path.iterdir()) == []
+
+
+COLD_OR_WARM = """
+import sys
+from pathlib import Path
+from simulate_cases import small_regime
+from learnclosure.simulate.channel import simulate_channel
+simulate_channel(small_regime(), Path(sys.argv[1]), members=1, snapshots=1, spinup_days=2,
+                 tracer_days=2)
+"""
+
+
+def test_kernels_just_compiled_and_kernels_read_from_disk_give_the_same_bytes(tmp_path):
+    environment = os.environ | {
+        "NUMBA_CACHE_DIR": str(tmp_path / "cache"),
+        "PYTHONPATH": str(Path(__file__).parent),
+    }
+    for name in ("cold", "warm"):
+        words = [sys.executable, "-c", COLD_OR_WARM, str(tmp_path / name)]
+        subprocess.run(words, env=environment, check=True)
+    assert list((tmp_path / "cache").rglob("*.nbc"))
+    cold, warm = (tmp_path / name / "sedge" / "member_00.nc" for name in ("cold", "warm"))
+    assert cold.read_bytes() == warm.read_bytes()

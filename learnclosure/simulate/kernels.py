@@ -41,14 +41,25 @@ HALO = 3
 """Cells of margin on each side that the reconstruction needs."""
 
 
+OPTIONS: dict[str, Any] = {"fastmath": True, "error_model": "numpy", "nogil": True}
+
+
 def compiled(function: Callable[P, R]) -> Callable[P, R]:
     """Compile a kernel, keeping the machine code on disk wherever a cache can be written."""
-    options: dict[str, Any] = {"fastmath": True, "error_model": "numpy", "nogil": True}
     try:
-        return cast("Callable[P, R]", numba.njit(cache=True, **options)(function))
+        return cast("Callable[P, R]", numba.njit(cache=True, **OPTIONS)(function))
     except RuntimeError:
         # Raised where neither the package nor the user's cache folder can be written to.
-        return cast("Callable[P, R]", numba.njit(**options)(function))
+        return cast("Callable[P, R]", numba.njit(**OPTIONS)(function))
+
+
+def part_of_kernel(function: Callable[P, R]) -> Callable[P, R]:
+    """Let kernels take a function in as if it were written out in them.
+
+    As machine code of its own it would be bound to a kernel in one way when that is
+    compiled and in another when that is read from disk, and rounding would differ.
+    """
+    return cast("Callable[P, R]", numba.njit(inline="always", **OPTIONS)(function))
 
 
 @compiled
@@ -80,7 +91,7 @@ def invert_spectrum(spectrum: Spectrum, ridge: Spectrum, inverse: Field, shift: 
                 )
 
 
-@compiled
+@part_of_kernel
 def face_velocities(
     corner: Field, spacing: float, background: float, scale: float, west: Field, south: Field
 ) -> None:
@@ -120,7 +131,7 @@ def face_velocities(
     south[0, HALO : HALO + columns] = south[rows, HALO : HALO + columns]
 
 
-@compiled
+@part_of_kernel
 def _wrap(padded: Field) -> None:
     """Fill the margin of a doubly periodic field."""
     rows, columns = padded.shape[0] - 2 * HALO, padded.shape[1] - 2 * HALO
@@ -133,7 +144,7 @@ def _wrap(padded: Field) -> None:
         padded[HALO + rows + row] = padded[HALO + row]
 
 
-@compiled
+@part_of_kernel
 def _flux(velocity: Field, a: Field, b: Field, c: Field, d: Field, e: Field, f: Field,
           out: Field) -> None:  # fmt: skip
     """Compute 60 times the upwind flux through the faces between cells ``c`` and ``d``."""
@@ -152,7 +163,7 @@ def _flux(velocity: Field, a: Field, b: Field, c: Field, d: Field, e: Field, f: 
         out[face] = speed * centred - abs(speed) * rough
 
 
-@compiled
+@part_of_kernel
 def _increment(
     west: Field, east: Field, south: Field, north: Field, source: Field, decay: float,
     field: Field, out: Field,
@@ -166,7 +177,7 @@ def _increment(
         )  # fmt: skip
 
 
-@compiled
+@part_of_kernel
 def _extrapolate(field: Field, now: Field, newer: Field, older: Field, weights: Field) -> None:
     """Add the Adams-Bashforth sum of increments and keep this one for later."""
     first, second, third = weights[0], weights[1], weights[2]
@@ -176,7 +187,7 @@ def _extrapolate(field: Field, now: Field, newer: Field, older: Field, weights: 
         older[cell] = increment
 
 
-@compiled
+@part_of_kernel
 def advance_field(
     padded: Field, newer: Field, older: Field, source: Field, decay: float,
     west: Field, south: Field, weights: Field, work: Field,
@@ -232,7 +243,7 @@ def advance_field(
     _extrapolate(body, now, newer.reshape(cells)[:inner], older.reshape(cells)[:inner], weights)
 
 
-@compiled
+@part_of_kernel
 def _separation(corner: Field, out: Field, mean: Field) -> None:
     """Average the upper minus the lower streamfunction to cell centres, and along x."""
     _, rows, columns = corner.shape
@@ -252,7 +263,7 @@ def _separation(corner: Field, out: Field, mean: Field) -> None:
         mean[row] = total / columns
 
 
-@compiled
+@part_of_kernel
 def vorticity_source(
     layer: int, vorticity: Field, ridge: Field, separation: Field, mean: Field, target: Field,
     south: Field, coefficients: Field, out: Field,
