@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 import xarray as xr
+
 from learnclosure.features.frames import frame_axes, tensor_to_model
 from learnclosure.features.inputs import compute_inputs
 from learnclosure.features.mean_state import MeanState

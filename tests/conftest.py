@@ -5,6 +5,7 @@ from __future__ import annotations
 import os
 
 import pytest
+
 from ensemble_files import QUICK, run_command, write_members, write_study
 
 

@@ -6,6 +6,7 @@ from collections.abc import Callable
 from pathlib import Path
 
 import xarray as xr
+
 from ensemble_files import member_dataset
 
 Change = Callable[[int, xr.Dataset], xr.Dataset]

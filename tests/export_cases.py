@@ -5,9 +5,9 @@ from __future__ import annotations
 from functools import cache
 
 import numpy as np
-from closures_cases import invented_regions
 from onnx.reference import ReferenceEvaluator
 
+from closures_cases import invented_regions
 from learnclosure.closures.closure import Closure
 from learnclosure.closures.intervals import HalfWidths
 from learnclosure.closures.table import Table, table_from_statistics

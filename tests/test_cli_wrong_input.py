@@ -7,8 +7,8 @@ import sys
 
 import numpy as np
 import pytest
-from ensemble_files import write_members, write_study
 
+from ensemble_files import write_members, write_study
 from learnclosure.cli import main
 
 

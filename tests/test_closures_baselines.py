@@ -4,8 +4,8 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from closures_cases import invented_regions
 
+from closures_cases import invented_regions
 from learnclosure.closures.baselines import (
     ConstantPerLayer,
     EadyVisbeck,

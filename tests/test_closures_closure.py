@@ -7,8 +7,8 @@ from itertools import product
 
 import numpy as np
 import pytest
-from closures_cases import invented_regions, mean_state, with_known_law
 
+from closures_cases import invented_regions, mean_state, with_known_law
 from learnclosure.closures.closure import Closure, true_frame_components
 from learnclosure.closures.intervals import calibrate_half_widths
 from learnclosure.closures.pointwise import UNBOUNDED, half_widths_on_axes

@@ -4,8 +4,8 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from closures_cases import COLUMNS, LAYERS, ROWS, invented_regions, mean_state, with_known_law
 
+from closures_cases import COLUMNS, LAYERS, ROWS, invented_regions, mean_state, with_known_law
 from learnclosure.closures.table import table_from_statistics
 from learnclosure.errors import TrainingError
 

@@ -8,8 +8,8 @@ import numpy as np
 import pytest
 import xarray as xr
 from compliance_checker.runner import CheckSuite
-from diagnosis_cases import MemoryEnsemble, box, random_ensemble
 
+from diagnosis_cases import MemoryEnsemble, box, random_ensemble
 from learnclosure.diagnosis.artefact import write_statistics
 from learnclosure.diagnosis.diagnose import diagnose
 from learnclosure.diagnosis.skill import divergence_skill, flux_skill

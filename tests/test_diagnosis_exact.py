@@ -4,8 +4,8 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from diagnosis_cases import GRADIENTS, box, uniform_eddies
 
+from diagnosis_cases import GRADIENTS, box, uniform_eddies
 from learnclosure.diagnosis.coarse import Coarsening
 from learnclosure.diagnosis.diagnose import diagnose
 from learnclosure.diagnosis.moments import accumulate_moments

@@ -4,10 +4,10 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from diagnosis_cases import box
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from diagnosis_cases import box
 from learnclosure.diagnosis.inversion import SmoothInversion, smoothness_operator
 from learnclosure.diagnosis.tensor import (
     NormalEquations,

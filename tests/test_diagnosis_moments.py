@@ -6,10 +6,10 @@ import tracemalloc
 
 import numpy as np
 import pytest
-from diagnosis_cases import MemoryEnsemble, box, random_ensemble
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from diagnosis_cases import MemoryEnsemble, box, random_ensemble
 from learnclosure.diagnosis.coarse import Coarsening
 from learnclosure.diagnosis.moments import accumulate_moments
 from learnclosure.diagnosis.sampling import jackknife_standard_error, spearman_brown

@@ -4,10 +4,10 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from ensemble_cases import each, write_classic
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from ensemble_cases import each, write_classic
 from learnclosure.ensemble.axes import Cells, between_cells, to_centres
 from learnclosure.ensemble.reader import open_ensemble
 from learnclosure.errors import SourceError

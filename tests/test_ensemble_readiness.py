@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from ensemble_cases import write_classic
-
 from learnclosure.ensemble.readiness import inspect_ensemble
 from learnclosure.study import EnsembleTable
 

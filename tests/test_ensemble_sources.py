@@ -5,8 +5,8 @@ from __future__ import annotations
 import numpy as np
 import pytest
 import xarray as xr
-from ensemble_files import member_dataset, write_members
 
+from ensemble_files import member_dataset, write_members
 from learnclosure.ensemble.reader import open_ensemble
 from learnclosure.ensemble.sources import content_digest, find_files
 from learnclosure.study import EnsembleTable

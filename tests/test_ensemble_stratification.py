@@ -5,8 +5,8 @@ from __future__ import annotations
 import gsw
 import numpy as np
 import pytest
-from ensemble_cases import write_classic
 
+from ensemble_cases import write_classic
 from learnclosure.ensemble.reader import open_ensemble
 from learnclosure.errors import RoleError, UnitError
 from learnclosure.study import EnsembleTable

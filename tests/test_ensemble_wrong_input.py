@@ -4,9 +4,9 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
+
 from ensemble_cases import each, write_classic
 from ensemble_files import member_dataset, write_members
-
 from learnclosure.ensemble.reader import open_ensemble
 from learnclosure.errors import DiagnosisError, GridError, RoleError, SourceError, UnitError
 from learnclosure.study import EnsembleTable

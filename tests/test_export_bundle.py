@@ -6,8 +6,8 @@ import subprocess
 import h5netcdf
 import numpy as np
 import pytest
-from export_cases import closure, export, table
 
+from export_cases import closure, export, table
 from learnclosure.errors import BundleError, CheckFailedError, OutputError
 from learnclosure.export import bundle
 from learnclosure.export.gate import verify_bundle

@@ -3,12 +3,12 @@ from types import SimpleNamespace
 
 import numpy as np
 import pytest
-from export_cases import evaluate_twice
 from onnx import TensorProto, helper
 from skl2onnx import to_onnx
 from sklearn.linear_model import Ridge
 from sklearn.neural_network import MLPRegressor
 
+from export_cases import evaluate_twice
 from learnclosure.closures.preprocessing import ClippedQuantileNormal
 from learnclosure.closures.regressors import (
     BoostingRegressor,

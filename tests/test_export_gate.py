@@ -5,9 +5,9 @@ from pathlib import Path
 import numpy as np
 import onnx
 import pytest
-from export_cases import export
 from onnx import TensorProto, helper, numpy_helper
 
+from export_cases import export
 from learnclosure.errors import BundleError
 from learnclosure.export.gate import verify_bundle
 from learnclosure.export.graph_checks import inspect_graph

@@ -1,8 +1,8 @@
 import numpy as np
 import onnx
 import pytest
-from export_cases import closure, evaluate_twice, table
 
+from export_cases import closure, evaluate_twice, table
 from learnclosure.export.graph import build_graph
 from learnclosure.export.reference import largest_difference, with_tails
 from learnclosure.export.runtime import open_session, run_session

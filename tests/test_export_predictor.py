@@ -6,9 +6,9 @@ import h5netcdf
 import numpy as np
 import pytest
 import xarray as xr
+
 from closures_cases import mean_state
 from export_cases import closure, export
-
 from learnclosure.delivery import predict_region
 from learnclosure.errors import BundleError, InputError, RoleError, SourceError, UnitError
 from learnclosure.export.predictor import load_predictor, predict_file

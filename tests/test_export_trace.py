@@ -1,9 +1,9 @@
 import numpy as np
 import pytest
-from export_cases import evaluate_twice
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from export_cases import evaluate_twice
 from learnclosure.closures.constraints import bounded_tensor
 from learnclosure.export.builder import GraphBuilder
 from learnclosure.export.trace import Traced, TracingNamespace

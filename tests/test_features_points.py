@@ -4,10 +4,10 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from features_cases import coordinates, mean_state
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from features_cases import coordinates, mean_state
 from learnclosure.errors import RoleError
 from learnclosure.features.frames import frame_axes, tensor_to_frame, tensor_to_model
 from learnclosure.features.inputs import compute_inputs, input_flags

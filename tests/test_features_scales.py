@@ -4,8 +4,8 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from features_cases import coordinates, level_state, mean_state
 
+from features_cases import coordinates, level_state, mean_state
 from learnclosure.features.inputs import compute_inputs
 from learnclosure.features.scales import rhines_length
 from learnclosure.features.stratification import deformation_radius, gravity_wave_speed

@@ -12,10 +12,10 @@ from pathlib import Path
 import h5netcdf
 import numpy as np
 import pytest
-from simulate_cases import read_members, small_regime
 
 from learnclosure.errors import InputError, OutputError, SimulationError
 from learnclosure.simulate.channel import simulate_channel, simulate_regions
+from simulate_cases import read_members, small_regime
 
 SHORT = {
     "members": 2, "snapshots": 2, "spacing_days": 1.0, "spinup_days": 2.0, "tracer_days": 1.0,

@@ -5,11 +5,11 @@ from __future__ import annotations
 import numpy as np
 import pytest
 from numpy.testing import assert_allclose
-from simulate_cases import small_regime, started
 
 from learnclosure.errors import InputError, SimulationError
 from learnclosure.simulate.regimes import DEMO_REGIMES, HELD_OUT
 from learnclosure.simulate.targets import CHANNEL_WAVES, target_fields
+from simulate_cases import small_regime, started
 
 RADIUS = 30.0e3
 BETA = 1.6e-11

@@ -8,7 +8,6 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from numpy.testing import assert_allclose
-from simulate_cases import read_members
 
 from learnclosure.errors import InputError
 from learnclosure.simulate.exact import (
@@ -18,6 +17,7 @@ from learnclosure.simulate.exact import (
     simulate_plane_wave,
     simulate_spinning,
 )
+from simulate_cases import read_members
 
 DAY = 86400.0
 

@@ -7,7 +7,6 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from hypothesis.extra.numpy import arrays
-from validation_cases import LAYERS, ROWS, constant_tensor, statistics
 
 from learnclosure.errors import TrainingError
 from learnclosure.validation.records import plain
@@ -21,6 +20,7 @@ from learnclosure.validation.scores import (
     r_squared,
 )
 from learnclosure.validation.truth import down_gradient_flux, flux_truth, interior
+from validation_cases import LAYERS, ROWS, constant_tensor, statistics
 
 quiet = settings(max_examples=25, deadline=None, derandomize=True)
 numbers = arrays(np.float64, 12, elements=st.floats(-1e3, 1e3, allow_subnormal=False))

@@ -7,7 +7,6 @@ from functools import cache
 
 import numpy as np
 import pytest
-from validation_cases import COLUMNS, LAYERS, ROWS, statistics
 
 from learnclosure.closures.closure import Closure
 from learnclosure.closures.pointwise import on_model_axes
@@ -20,6 +19,7 @@ from learnclosure.validation import out_of_fold
 from learnclosure.validation.evaluation import evaluate
 from learnclosure.validation.out_of_fold import Candidate
 from learnclosure.validation.selection import CandidateScore, choose, select_closure
+from validation_cases import COLUMNS, LAYERS, ROWS, statistics
 
 SETTINGS = ClosureSettings(regressors=("histogram-boosting", "ridge"), targets=("linear",))
 VALIDATION = ValidationSettings(folds=2, block_cells=4)

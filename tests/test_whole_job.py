@@ -7,9 +7,9 @@ import json
 import numpy as np
 import pytest
 import xarray as xr
+
 from ensemble_files import QUICK, write_members, write_study
 from ensemble_files import run_command as run
-
 from learnclosure.simulate.exact import exact_plane_wave_tensor
 
 
