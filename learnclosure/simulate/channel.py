@@ -28,13 +28,13 @@ from learnclosure.simulate.targets import CHANNEL_WAVES, target_fields
 
 Progress = Callable[[str, float, str], None]
 
-SPINUP_DAYS = 100.0
+SPINUP_DAYS = 80.0
 """Days without tracers, in which the eddies grow to full strength (about 80 days)."""
 
-TRACER_DAYS = 80.0
+TRACER_DAYS = 60.0
 """Days with tracers before the first snapshot, against their relaxation time of 60."""
 
-SPACING_DAYS = 6.0
+SPACING_DAYS = 5.0
 """Days between snapshots."""
 
 TRACER_STEP_COST = 3
