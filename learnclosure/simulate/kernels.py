@@ -352,7 +352,7 @@ def advance_members(
     stride = columns + 2 * HALO
     west = np.zeros((rows, stride), np.float32)
     south = np.zeros((rows + 1, stride), np.float32)
-    source = np.zeros((rows, stride), np.float32)
+    forcing = np.zeros((rows, stride), np.float32)
     work = np.zeros((3, (rows + 1) * stride), np.float32)
     separation = np.empty((rows, columns), np.float32)
     mean = np.empty(rows, np.float32)
@@ -362,16 +362,16 @@ def advance_members(
             face_velocities(corner[member, layer], spacing, background[layer], courant, west, south)
             vorticity_source(
                 layer, vorticity[member, layer], ridge, separation, mean, target, south,
-                coefficients[layer], source,
+                coefficients[layer], forcing,
             )  # fmt: skip
-            advance_field(
-                vorticity[member, layer], vorticity_newer[member, layer],
-                vorticity_older[member, layer], source, 0.0, west, south,
-                vorticity_weights, work,
-            )  # fmt: skip
-            for tracer in range(tracers.shape[2]):
-                advance_field(
-                    tracers[member, layer, tracer], tracers_newer[member, layer, tracer],
-                    tracers_older[member, layer, tracer], tracer_source[tracer], decay,
-                    west, south, tracer_weights, work,
-                )  # fmt: skip
+            # One call for vorticity and tracers alike: it is taken in, and compiled, once.
+            padded, rate, weights = vorticity[member, layer], 0.0, vorticity_weights
+            source = forcing
+            newer, older = vorticity_newer[member, layer], vorticity_older[member, layer]
+            for number in range(tracers.shape[2] + 1):
+                advance_field(padded, newer, older, source, rate, west, south, weights, work)
+                if number < tracers.shape[2]:
+                    padded, rate, weights = tracers[member, layer, number], decay, tracer_weights
+                    newer = tracers_newer[member, layer, number]
+                    older = tracers_older[member, layer, number]
+                    source = tracer_source[number]
