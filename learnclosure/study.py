@@ -20,6 +20,10 @@ Regressor = Literal["ridge", "extra-trees", "histogram-boosting", "mlp", "trees-
 Target = Literal["linear", "log-cholesky"]
 
 
+RADIUS_OVER_SMOOTHING = 2.2
+"""The tensor is kept smooth over .45 deformation radii; eddies blur gradients over one."""
+
+
 class Section(BaseModel):
     """Common behaviour of all tables of a study: closed and immutable."""
 
@@ -133,6 +137,33 @@ class DiagnosisSettings(Section):
     scalar_pull: float | None = Field(
         None, ge=0, description="pull to the local scalar fit; by default only for few tracers"
     )
+    solver: Literal["auto", "direct", "iterative"] = Field(
+        "auto", description="factorise the layers' systems or iterate; by size if auto"
+    )
+    form: Literal["local", "memory"] = Field(
+        "local",
+        description="fluxes from the mean gradient of the place, or (emerging) of where the "
+        "water came from",
+    )
+    memory_time: float = Field(
+        259_200.0, ge=0, description="memory form: time the flow remembers a gradient, s"
+    )
+    memory_length: float | None = Field(
+        None,
+        ge=0,
+        description="memory form: length eddies blur a gradient over, m; by "
+        "default 2.2 smoothing lengths, about a deformation radius",
+    )
+    leverage_tracers: tuple[str, ...] | None = Field(
+        None, description="tracers whose leverage is wanted; by default the withheld ones"
+    )
+
+    @property
+    def blurring_length(self) -> float:
+        """Length of the memory form, m."""
+        if self.memory_length is not None:
+            return self.memory_length
+        return RADIUS_OVER_SMOOTHING * self.smoothing_length
 
 
 class FeatureSettings(Section):
