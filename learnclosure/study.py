@@ -20,8 +20,8 @@ Regressor = Literal["ridge", "extra-trees", "histogram-boosting", "mlp", "trees-
 Target = Literal["linear", "log-cholesky"]
 
 
-RADIUS_OVER_SMOOTHING = 2.2
-"""The tensor is kept smooth over .45 deformation radii; eddies blur gradients over one."""
+RADIUS_OVER_SMOOTHING = 1.5
+"""The tensor is kept smooth over two thirds of what eddies blur gradients over."""
 
 
 class Section(BaseModel):
@@ -44,6 +44,11 @@ class VariableNames(Section):
     buoyancy: str | None = Field(None, description="buoyancy")
     temperature: str | None = Field(None, description="temperature, for the stratification")
     salinity: str | None = Field(None, description="salinity, for the stratification")
+    total_fluxes: dict[str, tuple[str, str]] = Field(
+        default_factory=dict,
+        description="total fluxes along x and y by tracer, where the model averaged or summed "
+        "them over its steps; velocities and tracers are then means over the same time",
+    )
 
 
 class GridLayout(Section):
@@ -55,9 +60,10 @@ class GridLayout(Section):
     time: str | None = Field(None, description="time dimension")
     member: str | None = Field(None, description="member dimension, if members share a file")
     periodic: tuple[Literal["x", "y"], ...] | None = Field(None, description="periodic axes")
-    faces: dict[Literal["x_velocity", "y_velocity"], Face] = Field(
+    faces: dict[Literal["x_velocity", "y_velocity", "total_flux_x", "total_flux_y"], Face] = Field(
         default_factory=dict,
-        description="face of the cell on which a velocity sits; cell centre if not named",
+        description="face of the cell on which a velocity or total flux sits; the centre if "
+        "not named, and for fluxes where the velocity sits",
     )
     vertical: Literal["layers", "levels"] | None = Field(
         None, description="whether vertical cells move with the fluid or stand still"
@@ -128,7 +134,7 @@ class DiagnosisSettings(Section):
     )
     coarsen: int = Field(2, ge=1, le=64, description="cells per coarse cell along x and y")
     smoothing_length: float = Field(
-        16.0e3, ge=0, description="length over which the tensor is kept smooth, m"
+        24.0e3, ge=0, description="length over which the tensor is kept smooth, m"
     )
     floor: float = Field(50.0, ge=0, description="lowest eigenvalue of the symmetric part, m2 s-1")
     floor_method: Literal["admm", "projection"] = Field(
@@ -152,7 +158,7 @@ class DiagnosisSettings(Section):
         None,
         ge=0,
         description="memory form: length eddies blur a gradient over, m; by "
-        "default 2.2 smoothing lengths, about a deformation radius",
+        "default 1.5 smoothing lengths, about a deformation radius",
     )
     leverage_tracers: tuple[str, ...] | None = Field(
         None, description="tracers whose leverage is wanted; by default the withheld ones"
