@@ -18,6 +18,7 @@ Face = Literal["center", "east", "west", "north", "south"]
 Family = Literal["mean-field", "local-energy"]
 Regressor = Literal["ridge", "extra-trees", "histogram-boosting", "mlp", "trees-and-mlp"]
 Target = Literal["linear", "log-cholesky"]
+GaugeBoundary = Literal["no-flux", "zero-potential", "least-flux"]
 
 
 class Section(BaseModel):
@@ -132,6 +133,15 @@ class DiagnosisSettings(Section):
     )
     scalar_pull: float | None = Field(
         None, ge=0, description="pull to the local scalar fit; by default only for few tracers"
+    )
+    flux: Literal["full", "divergent"] = Field(
+        "full", description="invert the eddy fluxes or only their divergent parts"
+    )
+    gauge_boundary: GaugeBoundary = Field(
+        "no-flux", description="what the divergent part of a flux holds at coasts"
+    )
+    relaxation_time: float | None = Field(
+        None, gt=0, description="time in which anomalies of the tracers are relaxed away, s"
     )
 
 

@@ -7,6 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
+from learnclosure.diagnosis.gauge import HelmholtzSolver
 from learnclosure.diagnosis.inversion import SmoothFit, SmoothInversion
 from learnclosure.diagnosis.moments import GroupMoments, Moments
 from learnclosure.diagnosis.sampling import (
@@ -39,7 +40,7 @@ class GroupEstimate:
     Attributes
     ----------
     gradient, flux : dict of str to ndarray, shape (2, layer, y, x)
-        Of every tracer, withheld ones included.
+        Of every tracer, withheld ones included; fluxes as they were inverted.
     equations : NormalEquations
     smooth : SmoothFit
     least_squares : ndarray, shape (layer, y, x, 2, 2), m2 s-1
@@ -74,6 +75,8 @@ class Estimator:
     inversion : SmoothInversion
     tracers : tuple of str
         Tracers the tensor is fitted to.
+    gauge : HelmholtzSolver, optional
+        Where given, only the divergent parts of fluxes are inverted and scored.
     """
 
     def __init__(
@@ -82,11 +85,20 @@ class Estimator:
         area: FloatArray,
         inversion: SmoothInversion,
         tracers: tuple[str, ...],
+        gauge: HelmholtzSolver | None = None,
     ) -> None:
         self.geometry = geometry
         self.area = area
         self.inversion = inversion
         self.tracers = tracers
+        self.gauge = gauge
+
+    def chosen_part(self, fluxes: dict[str, FloatArray]) -> dict[str, FloatArray]:
+        """Take the part of each flux that is inverted, shape (2, layer, y, x) each."""
+        if self.gauge is None:
+            return fluxes
+        parts = self.gauge.divergent_part(np.stack(list(fluxes.values())))
+        return dict(zip(fluxes, parts, strict=True))
 
     def gradients(self, mean: dict[str, FloatArray]) -> dict[str, FloatArray]:
         """Differentiate mean tracers, shape (2, layer, y, x) each."""
@@ -117,10 +129,11 @@ class Estimator:
         """
         means = {name: moments.mean[name] for name in moments.flux}
         gradients = self.gradients(means)
-        equations = self.equations(moments.flux, gradients)
+        fluxes = self.chosen_part(moments.flux)
+        equations = self.equations(fluxes, gradients)
         return GroupEstimate(
             gradient=gradients,
-            flux=moments.flux,
+            flux=fluxes,
             equations=equations,
             smooth=self.inversion.fit(equations),
             least_squares=least_squares_tensor(equations),
@@ -149,7 +162,7 @@ class Estimator:
         left_out = []
         for member in range(members):
             mean, flux = moments.without_member(member)
-            equations = self.equations(flux, self.gradients(mean))
+            equations = self.equations(self.chosen_part(flux), self.gradients(mean))
             left_out.append(self.inversion.fit(equations).tensor)
         return jackknife_standard_error(np.stack(left_out))
 
