@@ -343,3 +343,16 @@ def test_the_artefact_tells_the_rotational_share_and_the_gauge():
     assert "dye_b_divergent_flux_x" not in plain
     for quantity in ("transport_tensor_xy", "transport_tensor_xy_standard_error"):
         assert np.nanmax(np.abs(plain[quantity].values - chosen[quantity].values)) > 1.0
+
+
+def test_a_constant_added_to_alpha_changes_nothing_that_the_least_flux_keeps():
+    # div(alpha zhat x grad C) = 0 for constant alpha: only grad(alpha) moves a tracer.
+    grid = box(1, 10, 12)
+    slope_x, slope_y = gradient(np.random.default_rng(9).normal(size=grid.shape), grid.geometry)
+    flux = np.random.default_rng(10).normal(size=(2, *grid.shape))
+    more = flux + 700.0 * np.stack([slope_y, -slope_x])
+    solver = HelmholtzSolver(grid.geometry, "least-flux")
+    assert np.abs(more - flux).max() > 1e-3
+    np.testing.assert_allclose(
+        solver.divergent_part(more), solver.divergent_part(flux), atol=1e-12
+    )
