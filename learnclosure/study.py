@@ -137,12 +137,20 @@ class DiagnosisSettings(Section):
     flux: Literal["full", "divergent"] = Field(
         "full", description="invert the eddy fluxes or only their divergent parts"
     )
+    rotational_weight: float = Field(
+        0.0, ge=0, le=1, description="flux = 'divergent': share of the rotational part that stays"
+    )
     gauge_boundary: GaugeBoundary = Field(
         "no-flux", description="what the divergent part of a flux holds at coasts"
     )
     relaxation_time: float | None = Field(
         None, gt=0, description="time in which anomalies of the tracers are relaxed away, s"
     )
+
+    @property
+    def kept_rotational_weight(self) -> float:
+        """Share of the rotational part of fluxes that is inverted."""
+        return 1.0 if self.flux == "full" else self.rotational_weight
 
 
 class FeatureSettings(Section):

@@ -15,7 +15,8 @@ from learnclosure.diagnosis.inversion import SmoothInversion
 from learnclosure.diagnosis.moments import GroupMoments
 from learnclosure.diagnosis.tensor import down_gradient
 from learnclosure.ensemble.grid import Geometry, divergence, gradient
-from learnclosure.study import DiagnosisSettings
+from learnclosure.errors import StudyError
+from learnclosure.study import DiagnosisSettings, parse_study
 
 CHOICES = ("no-flux", "zero-potential", "least-flux")
 quick = settings(derandomize=True, deadline=None, max_examples=20)
@@ -308,41 +309,69 @@ def test_the_divergent_part_gives_the_diffusivity_under_a_rotational_flux():
     moments = GroupMoments(mean, flux, np.ones(grid.shape))
     area, options = sea_area(grid.geometry), DiagnosisSettings(smoothing_length=20e3, floor=0.0)
     inversion = SmoothInversion(grid.geometry, area, options, len(names))
-    full = Estimator(grid.geometry, area, inversion, names).group(moments)
     gauge = HelmholtzSolver(grid.geometry)
-    divergent = Estimator(grid.geometry, area, inversion, names, gauge).group(moments)
+    full, half, divergent = (
+        Estimator(grid.geometry, area, inversion, names, gauge, weight).group(moments)
+        for weight in (1.0, 0.5, 0.0)
+    )
     expected = np.broadcast_to(900.0 * np.eye(2), divergent.smooth.tensor.shape)
     np.testing.assert_allclose(divergent.smooth.tensor, expected, atol=1e-8)
-    assert np.abs(full.smooth.tensor - expected).max() > 300.0
+    far, near = (np.abs(group.smooth.tensor - expected).max() for group in (full, half))
+    assert far > 300.0
+    assert 0.3 * far < near < 0.7 * far
+
+
+def gauged(**settings):
+    mask = np.arange(80).reshape(1, 8, 10) * np.ones((2, 1, 1)) > 12
+    ensemble = random_ensemble(box(2, 8, 10, mask=mask))
+    return diagnose(ensemble, DiagnosisSettings(coarsen=1, floor=0.0, **settings)), ensemble
 
 
 def test_the_artefact_tells_the_rotational_share_and_the_gauge():
-    grid = box(2, 8, 10, mask=np.arange(80).reshape(1, 8, 10) * np.ones((2, 1, 1)) > 12)
-    ensemble = random_ensemble(grid)
-    plain = diagnose(ensemble, DiagnosisSettings(coarsen=1))
-    chosen = diagnose(
-        ensemble, DiagnosisSettings(coarsen=1, flux="divergent", gauge_boundary="least-flux")
-    )
-    assert plain.attrs["inverted_flux"] == "full"
-    assert plain.attrs["gauge_boundary"] == "no-flux"
-    assert (chosen.attrs["inverted_flux"], chosen.attrs["gauge_boundary"]) == (
-        "divergent", "least-flux",
-    )  # fmt: skip
-    for statistics in (plain, chosen):
+    plain, ensemble = gauged()
+    chosen, _ = gauged(flux="divergent", gauge_boundary="least-flux")
+    names = ("inverted_flux", "gauge_boundary", "rotational_weight")
+    assert [plain.attrs[name] for name in names] == ["full", "no-flux", 1.0]
+    assert [chosen.attrs[name] for name in names] == ["divergent", "least-flux", 0.0]
+    for statistics, boundary in ((plain, "no-flux"), (chosen, "least-flux")):
         share = statistics["rotational_share"]
         assert share.dims == ("tracers", "layer")
         assert statistics["tracer"].values.tolist() == [f"dye_{letter}" for letter in "abcde"]
-        assert np.all((share > 0.0) & (share < 1.0))
+        flux = np.stack([plain[f"dye_b_eddy_flux_{axis}"].values for axis in "xy"])
+        part = HelmholtzSolver(ensemble.grid.geometry, boundary).divergent_part(flux)
+        expected = rotational_share(flux, part, sea_area(ensemble.grid.geometry))
+        np.testing.assert_allclose(share[1], expected, rtol=1e-12)
     assert np.all(plain["rotational_share"] < chosen["rotational_share"])
-    name = "dye_b_eddy_flux_y"
-    np.testing.assert_array_equal(plain[name], chosen[name])
-    solver = HelmholtzSolver(grid.geometry, "least-flux")
-    flux = np.stack([plain[f"dye_b_eddy_flux_{axis}"].values for axis in "xy"])
-    part = np.stack([chosen[f"dye_b_divergent_flux_{axis}"].values for axis in "xy"])
-    np.testing.assert_allclose(part, solver.divergent_part(flux), atol=1e-15)
-    assert "dye_b_divergent_flux_x" not in plain
-    for quantity in ("transport_tensor_xy", "transport_tensor_xy_standard_error"):
-        assert np.nanmax(np.abs(plain[quantity].values - chosen[quantity].values)) > 1.0
+    # What is written is the eddy flux itself, whichever part of it is inverted.
+    np.testing.assert_array_equal(plain["dye_b_eddy_flux_y"], chosen["dye_b_eddy_flux_y"])
+
+
+def test_the_tensor_its_error_and_its_skill_are_of_the_part_that_is_inverted():
+    plain, half, divergent = (
+        gauged(**settings)[0]
+        for settings in (
+            {}, {"flux": "divergent", "rotational_weight": 0.5}, {"flux": "divergent"},
+        )
+    )  # fmt: skip
+    for name in ("transport_tensor_xy", "transport_tensor_xy_standard_error"):
+        assert np.nanmax(np.abs(plain[name].values - divergent[name].values)) > 1.0
+    # Least squares are linear in the flux: half of the rotational part is half the way.
+    full, between, none = (
+        statistics["least_squares_tensor_yx"].values for statistics in (plain, half, divergent)
+    )
+    np.testing.assert_allclose(between, 0.5 * (full + none), rtol=1e-9, atol=1e-9)
+    for name in ("withheld_flux_skill", "withheld_divergent_flux_skill"):
+        assert plain[name].dims == ("withheld", "layer")
+        assert np.all(plain[name].values < 1.0)
+        assert np.all(plain[name].values != divergent[name].values)
+
+
+def test_a_share_of_the_rotational_part_beyond_all_of_it_is_refused():
+    text = '[[ensemble]]\nname = "north"\nfiles = "n/*.nc"\n[diagnosis]\nrotational_weight = 1.5\n'
+    with pytest.raises(StudyError, match=r"rotational_weight: Input should be less than or equal"):
+        parse_study(text)
+    with pytest.raises(StudyError, match=r"gauge_boundary: Input should be 'no-flux'"):
+        parse_study(text.replace("rotational_weight = 1.5", 'gauge_boundary = "open"'))
 
 
 def test_a_constant_added_to_alpha_changes_nothing_that_the_least_flux_keeps():
@@ -353,6 +382,4 @@ def test_a_constant_added_to_alpha_changes_nothing_that_the_least_flux_keeps():
     more = flux + 700.0 * np.stack([slope_y, -slope_x])
     solver = HelmholtzSolver(grid.geometry, "least-flux")
     assert np.abs(more - flux).max() > 1e-3
-    np.testing.assert_allclose(
-        solver.divergent_part(more), solver.divergent_part(flux), atol=1e-12
-    )
+    np.testing.assert_allclose(solver.divergent_part(more), solver.divergent_part(flux), atol=1e-12)

@@ -69,9 +69,8 @@ def diagnose(
     )
     inversion = SmoothInversion(geometry, area, chosen, len(ensemble.tracers))
     gauge = HelmholtzSolver(geometry, chosen.gauge_boundary)
-    estimator = Estimator(
-        geometry, area, inversion, ensemble.tracers, gauge if chosen.flux == "divergent" else None
-    )
+    kept = chosen.kept_rotational_weight
+    estimator = Estimator(geometry, area, inversion, ensemble.tracers, gauge, kept)
     whole = estimator.group(moments.whole)
     halves = tuple(estimator.group(half) for half in moments.halves)
     valid = estimator.determined(whole.equations)
@@ -84,7 +83,7 @@ def diagnose(
     builder = StatisticsBuilder(coarsening.x, coarsening.y, len(geometry.mask))
     _add_mean_state(builder, ensemble, coarsening, moments)
     _add_tracers(builder, ensemble, whole, halves, moments)
-    _add_gauge(builder, gauge, moments, written=chosen.flux == "divergent")
+    _add_gauge(builder, gauge, whole)
     _add_tensor(builder, estimator, whole, valid, error)
     _add_quality(builder, ensemble, estimator, whole, halves, valid)
     _add_skill(builder, skill)
@@ -184,41 +183,29 @@ def _add_tracers(
             f"{name}_mean", moments.whole.mean[name], ("layer", "y", "x"),
             f"ensemble and time mean of {name}", units,
         )  # fmt: skip
-        builder.add_tracer(name, units, moments.whole.flux[name], whole.gradient[name])
+        builder.add_tracer(name, units, whole.flux[name], whole.gradient[name])
         if halves:
             builder.add_tracer(
                 name,
                 units,
-                np.stack([half.flux[name] for half in moments.halves]),
+                np.stack([half.flux[name] for half in halves]),
                 np.stack([half.gradient[name] for half in halves]),
                 halves=True,
             )
 
 
-def _add_gauge(
-    builder: StatisticsBuilder, gauge: HelmholtzSolver, moments: Moments, *, written: bool
-) -> None:
-    names = tuple(moments.whole.flux)
-    fluxes = np.stack([moments.whole.flux[name] for name in names])
-    parts = gauge.divergent_part(fluxes)
-    builder.coordinates["tracer"] = xr.Variable(
-        ("tracers",), np.array(names, dtype=object), {"long_name": "tracer, withheld ones too"}
-    )
+def _add_gauge(builder: StatisticsBuilder, gauge: HelmholtzSolver, whole: GroupEstimate) -> None:
+    fluxes = np.stack(list(whole.flux.values()))
     sea = np.where(gauge.geometry.mask, gauge.geometry.area, 0.0)
+    builder.coordinates["tracer"] = xr.Variable(
+        ("tracers",), np.array(list(whole.flux), dtype=object), {"long_name": "tracer"}
+    )
     builder.add(
-        "rotational_share", rotational_share(fluxes, parts, sea), ("tracers", "layer"),
+        "rotational_share", rotational_share(fluxes, gauge.divergent_part(fluxes), sea),
+        ("tracers", "layer"),
         "share of the mean square of the eddy flux that is not in its divergent part", "1",
         references="Fox-Kemper, Ferrari and Pedlosky 2003, J. Phys. Oceanogr. 33, 478-483",
     )  # fmt: skip
-    if not written:
-        return
-    for name, part in zip(names, parts, strict=True):
-        units = builder.variables[f"{name}_eddy_flux_x"].attrs["units"]
-        for number, axis in enumerate("xy"):
-            builder.add(
-                f"{name}_divergent_flux_{axis}", part[number], ("layer", "y", "x"),
-                f"divergent part along {axis} of the eddy flux of {name}", units,
-            )  # fmt: skip
 
 
 def _add_tensor(
@@ -310,11 +297,18 @@ def _add_skill(builder: StatisticsBuilder, skill: WithheldSkill | None) -> None:
         "withheld_divergence_skill": (
             skill.divergence, "flux divergences", "the transport tensor",
         ),
+        "withheld_divergent_flux_skill": (
+            skill.divergent_flux, "divergent parts of eddy fluxes", "the transport tensor",
+        ),
         "least_squares_withheld_flux_skill": (
             skill.least_squares_flux, "eddy fluxes", "plain least squares",
         ),
         "least_squares_withheld_divergence_skill": (
             skill.least_squares_divergence, "flux divergences", "plain least squares",
+        ),
+        "least_squares_withheld_divergent_flux_skill": (
+            skill.least_squares_divergent_flux, "divergent parts of eddy fluxes",
+            "plain least squares",
         ),
     }  # fmt: skip
     for name, (values, what, which) in columns.items():
@@ -352,6 +346,7 @@ def _attributes(
         "tensor_convention": "J = -K grad C, rows flux, columns gradient; alpha = (Kyx - Kxy)/2",
         "coarsening_factor": np.int32(settings.coarsen),
         "inverted_flux": settings.flux,
+        "rotational_weight": settings.kept_rotational_weight,
         "gauge_boundary": settings.gauge_boundary,
         "smoothing_length_m": settings.smoothing_length,
         "floor_m2_s_1": settings.floor,

@@ -40,7 +40,7 @@ class GroupEstimate:
     Attributes
     ----------
     gradient, flux : dict of str to ndarray, shape (2, layer, y, x)
-        Of every tracer, withheld ones included; fluxes as they were inverted.
+        Of every tracer, withheld ones included.
     equations : NormalEquations
     smooth : SmoothFit
     least_squares : ndarray, shape (layer, y, x, 2, 2), m2 s-1
@@ -60,8 +60,10 @@ class WithheldSkill:
     tracers: tuple[str, ...]
     flux: FloatArray
     divergence: FloatArray
+    divergent_flux: FloatArray
     least_squares_flux: FloatArray
     least_squares_divergence: FloatArray
+    least_squares_divergent_flux: FloatArray
 
 
 class Estimator:
@@ -75,8 +77,11 @@ class Estimator:
     inversion : SmoothInversion
     tracers : tuple of str
         Tracers the tensor is fitted to.
-    gauge : HelmholtzSolver, optional
-        Where given, only the divergent parts of fluxes are inverted and scored.
+    gauge : HelmholtzSolver
+        Takes the divergent part of fluxes.
+    rotational_weight : float, optional
+        What is left of the rest of each flux before it is inverted: 1 for the full flux, 0
+        for its divergent part.
     """
 
     def __init__(
@@ -85,20 +90,15 @@ class Estimator:
         area: FloatArray,
         inversion: SmoothInversion,
         tracers: tuple[str, ...],
-        gauge: HelmholtzSolver | None = None,
+        gauge: HelmholtzSolver,
+        rotational_weight: float = 1.0,
     ) -> None:
         self.geometry = geometry
         self.area = area
         self.inversion = inversion
         self.tracers = tracers
         self.gauge = gauge
-
-    def chosen_part(self, fluxes: dict[str, FloatArray]) -> dict[str, FloatArray]:
-        """Take the part of each flux that is inverted, shape (2, layer, y, x) each."""
-        if self.gauge is None:
-            return fluxes
-        parts = self.gauge.divergent_part(np.stack(list(fluxes.values())))
-        return dict(zip(fluxes, parts, strict=True))
+        self.rotational_weight = rotational_weight
 
     def gradients(self, mean: dict[str, FloatArray]) -> dict[str, FloatArray]:
         """Differentiate mean tracers, shape (2, layer, y, x) each."""
@@ -111,7 +111,7 @@ class Estimator:
         """Sum the normal equations of the tracers used."""
         names = self.tracers if tracers is None else tracers
         return normal_equations(
-            np.stack([fluxes[name] for name in names]),
+            self.gauge.shrunk(np.stack([fluxes[name] for name in names]), self.rotational_weight),
             np.stack([gradients[name] for name in names]),
             self.area,
         )
@@ -129,11 +129,10 @@ class Estimator:
         """
         means = {name: moments.mean[name] for name in moments.flux}
         gradients = self.gradients(means)
-        fluxes = self.chosen_part(moments.flux)
-        equations = self.equations(fluxes, gradients)
+        equations = self.equations(moments.flux, gradients)
         return GroupEstimate(
             gradient=gradients,
-            flux=fluxes,
+            flux=moments.flux,
             equations=equations,
             smooth=self.inversion.fit(equations),
             least_squares=least_squares_tensor(equations),
@@ -162,7 +161,7 @@ class Estimator:
         left_out = []
         for member in range(members):
             mean, flux = moments.without_member(member)
-            equations = self.equations(self.chosen_part(flux), self.gradients(mean))
+            equations = self.equations(flux, self.gradients(mean))
             left_out.append(self.inversion.fit(equations).tensor)
         return jackknife_standard_error(np.stack(left_out))
 
@@ -213,7 +212,7 @@ class Estimator:
 
     def _score(
         self, tensor: FloatArray, estimate: GroupEstimate, name: str, valid: BoolArray
-    ) -> tuple[FloatArray, FloatArray]:
+    ) -> tuple[FloatArray, FloatArray, FloatArray]:
         true = estimate.flux[name][None]
         predicted = down_gradient(tensor, estimate.gradient[name][None])
         weights = np.where(valid, self.area, 0.0)
@@ -222,8 +221,11 @@ class Estimator:
         )
         of_flux = flux_skill(predicted, true, weights)
         of_divergence = divergence_skill(spread[0][None], spread[1][None], weights)
+        parts = self.gauge.divergent_part(np.stack([predicted, true]))
+        of_part = flux_skill(parts[0], parts[1], weights)
         # A flux that does not vary has a divergence of rounding errors only.
-        return of_flux, np.where(np.isnan(of_flux), np.nan, of_divergence)
+        still = np.isnan(of_flux)
+        return of_flux, np.where(still, np.nan, of_divergence), np.where(still, np.nan, of_part)
 
     def component_reliability(
         self, halves: tuple[GroupEstimate, ...], valid: BoolArray

@@ -252,6 +252,29 @@ class HelmholtzSolver:
             result[..., layer, wet] = part.T.reshape(cells.shape)
         return result
 
+    def shrunk(self, flux: FloatArray, weight: float) -> FloatArray:
+        """Take the divergent part of fluxes and a share of the rest.
+
+        The rest carries what the advection of tracer variance puts there (Marshall and
+        Shutts 1981, J. Phys. Oceanogr. 11, 1677-1680, from memory), which no local tensor
+        can follow, next to what a local tensor does make.
+
+        Parameters
+        ----------
+        flux : ndarray, shape (..., 2, layer, y, x)
+        weight : float
+            Share of the rotational part that stays: 1 gives the flux itself.
+
+        Returns
+        -------
+        ndarray, shape (..., 2, layer, y, x)
+            Units of the flux.
+        """
+        if weight == 1.0:
+            return flux
+        part = self.divergent_part(flux)
+        return part if weight == 0.0 else part + weight * (flux - part)
+
     def _projection(self, wet: BoolArray) -> _LayerProjection:
         key = wet.tobytes()
         if key not in self._known:
