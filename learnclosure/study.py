@@ -18,6 +18,7 @@ Face = Literal["center", "east", "west", "north", "south"]
 Family = Literal["mean-field", "local-energy"]
 Regressor = Literal["ridge", "extra-trees", "histogram-boosting", "mlp", "trees-and-mlp"]
 Target = Literal["linear", "log-cholesky"]
+GaugeBoundary = Literal["no-flux", "zero-potential", "least-flux"]
 
 
 RADIUS_OVER_SMOOTHING = 1.5
@@ -143,6 +144,18 @@ class DiagnosisSettings(Section):
     scalar_pull: float | None = Field(
         None, ge=0, description="pull to the local scalar fit; by default only for few tracers"
     )
+    flux: Literal["full", "divergent"] = Field(
+        "full", description="invert the eddy fluxes or only their divergent parts"
+    )
+    rotational_weight: float = Field(
+        0.0, ge=0, le=1, description="flux = 'divergent': share of the rotational part that stays"
+    )
+    gauge_boundary: GaugeBoundary = Field(
+        "no-flux", description="what the divergent part of a flux holds at coasts"
+    )
+    relaxation_time: float | None = Field(
+        None, gt=0, description="time in which anomalies of the tracers are relaxed away, s"
+    )
     solver: Literal["auto", "direct", "iterative"] = Field(
         "auto", description="factorise the layers' systems or iterate; by size if auto"
     )
@@ -170,6 +183,11 @@ class DiagnosisSettings(Section):
         if self.memory_length is not None:
             return self.memory_length
         return RADIUS_OVER_SMOOTHING * self.smoothing_length
+
+    @property
+    def kept_rotational_weight(self) -> float:
+        """Share of the rotational part of fluxes that is inverted."""
+        return 1.0 if self.flux == "full" else self.rotational_weight
 
 
 class FeatureSettings(Section):

@@ -9,6 +9,7 @@ from diagnosis_cases import box, random_ensemble
 from learnclosure.diagnosis.budget import error_budget, jackknife_calibration, smoothing_check
 from learnclosure.diagnosis.diagnose import diagnose
 from learnclosure.diagnosis.estimate import Estimator
+from learnclosure.diagnosis.gauge import HelmholtzSolver
 from learnclosure.diagnosis.inversion import SmoothInversion
 from learnclosure.diagnosis.memory import MemoryGradient
 from learnclosure.diagnosis.moments import GroupMoments
@@ -36,7 +37,12 @@ def estimator(grid, names=("a", "b", "c", "d", "e", "f"), **options):
     still = (np.zeros(grid.shape), np.zeros(grid.shape))
     inversion = SmoothInversion(geometry, area, settings, len(names))
     return Estimator(
-        geometry, area, inversion, tuple(names), MemoryGradient(still, geometry, 0.0, 0.0)
+        geometry,
+        area,
+        inversion,
+        tuple(names),
+        MemoryGradient(still, geometry, 0.0, 0.0),
+        HelmholtzSolver(geometry),
     )
 
 

@@ -13,6 +13,7 @@ from learnclosure import __version__
 from learnclosure.diagnosis.artefact import StatisticsBuilder
 from learnclosure.diagnosis.coarse import Coarsening
 from learnclosure.diagnosis.estimate import Estimator, Form, GroupEstimate, WithheldSkill
+from learnclosure.diagnosis.gauge import HelmholtzSolver, rotational_share
 from learnclosure.diagnosis.inversion import SmoothInversion
 from learnclosure.diagnosis.memory import MemoryGradient
 from learnclosure.diagnosis.moments import EnsembleSource, Moments, accumulate_moments
@@ -73,7 +74,9 @@ def diagnose(
     inversion = SmoothInversion(geometry, area, chosen, len(ensemble.tracers))
     velocity = (moments.whole.mean["x_velocity"], moments.whole.mean["y_velocity"])
     memory = MemoryGradient(velocity, geometry, chosen.memory_time, chosen.blurring_length)
-    estimator = Estimator(geometry, area, inversion, ensemble.tracers, memory)
+    gauge = HelmholtzSolver(geometry, chosen.gauge_boundary)
+    kept = chosen.kept_rotational_weight
+    estimator = Estimator(geometry, area, inversion, ensemble.tracers, memory, gauge, kept)
     whole = estimator.group(moments.whole)
     halves = tuple(estimator.group(half) for half in moments.halves)
     valid = estimator.determined(whole.equations)
@@ -89,6 +92,7 @@ def diagnose(
     builder = StatisticsBuilder(coarsening.x, coarsening.y, len(geometry.mask))
     _add_mean_state(builder, ensemble, coarsening, moments)
     _add_tracers(builder, ensemble, whole, halves, moments)
+    _add_gauge(builder, gauge, whole)
     _add_tensor(builder, estimator, whole, valid, error)
     add_quality(builder, ensemble, estimator, whole, halves, valid)
     add_budget(builder, ensemble, estimator, whole, halves, valid, error)
@@ -197,6 +201,20 @@ def _add_tracers(
             )
 
 
+def _add_gauge(builder: StatisticsBuilder, gauge: HelmholtzSolver, whole: GroupEstimate) -> None:
+    fluxes = np.stack(list(whole.flux.values()))
+    sea = np.where(gauge.geometry.mask, gauge.geometry.area, 0.0)
+    builder.coordinates["tracer"] = xr.Variable(
+        ("tracers",), np.array(list(whole.flux), dtype=object), {"long_name": "tracer"}
+    )
+    builder.add(
+        "rotational_share", rotational_share(fluxes, gauge.divergent_part(fluxes), sea),
+        ("tracers", "layer"),
+        "share of the mean square of the eddy flux that is not in its divergent part", "1",
+        references="Fox-Kemper, Ferrari and Pedlosky 2003, J. Phys. Oceanogr. 33, 478-483",
+    )  # fmt: skip
+
+
 def _add_tensor(
     builder: StatisticsBuilder,
     estimator: Estimator,
@@ -269,6 +287,9 @@ def _attributes(
         "tensor_form": settings.form,
         "memory_time_s": settings.memory_time,
         "memory_length_m": settings.blurring_length,
+        "inverted_flux": settings.flux,
+        "rotational_weight": settings.kept_rotational_weight,
+        "gauge_boundary": settings.gauge_boundary,
         "smoothing_length_m": settings.smoothing_length,
         "floor_m2_s_1": settings.floor,
         "floor_method": settings.floor_method,

@@ -8,6 +8,7 @@ from typing import Literal
 import numpy as np
 import numpy.typing as npt
 
+from learnclosure.diagnosis.gauge import HelmholtzSolver
 from learnclosure.diagnosis.inversion import SmoothFit, SmoothInversion
 from learnclosure.diagnosis.memory import MemoryGradient
 from learnclosure.diagnosis.moments import GroupMoments, Moments
@@ -66,8 +67,10 @@ class WithheldSkill:
     tracers: tuple[str, ...]
     flux: FloatArray
     divergence: FloatArray
+    divergent_flux: FloatArray
     least_squares_flux: FloatArray
     least_squares_divergence: FloatArray
+    least_squares_divergent_flux: FloatArray
 
 
 class Estimator:
@@ -83,6 +86,11 @@ class Estimator:
         Tracers the tensor is fitted to.
     memory : MemoryGradient
         What the memory form acts on.
+    gauge : HelmholtzSolver
+        Takes the divergent part of fluxes.
+    rotational_weight : float, optional
+        What is left of the rest of each flux before it is inverted: 1 for the full flux, 0
+        for its divergent part.
     """
 
     def __init__(
@@ -92,6 +100,8 @@ class Estimator:
         inversion: SmoothInversion,
         tracers: tuple[str, ...],
         memory: MemoryGradient,
+        gauge: HelmholtzSolver,
+        rotational_weight: float = 1.0,
     ) -> None:
         self.geometry = geometry
         self.area = area
@@ -99,6 +109,8 @@ class Estimator:
         self.tracers = tracers
         self.memory = memory
         self.form: Form = inversion.settings.form
+        self.gauge = gauge
+        self.rotational_weight = rotational_weight
 
     def gradients(self, mean: dict[str, FloatArray]) -> dict[str, FloatArray]:
         """Differentiate mean tracers, shape (2, layer, y, x) each."""
@@ -119,7 +131,7 @@ class Estimator:
         """Sum the normal equations of the tracers used."""
         names = self.tracers if tracers is None else tracers
         return normal_equations(
-            np.stack([fluxes[name] for name in names]),
+            self.gauge.shrunk(np.stack([fluxes[name] for name in names]), self.rotational_weight),
             np.stack([gradients[name] for name in names]),
             self.area,
         )
@@ -222,8 +234,8 @@ class Estimator:
 
     def score(
         self, tensor: FloatArray, estimate: GroupEstimate, name: str, valid: BoolArray
-    ) -> tuple[FloatArray, FloatArray]:
-        """Score a tensor on the flux and the flux divergence of one tracer.
+    ) -> tuple[FloatArray, FloatArray, FloatArray]:
+        """Score a tensor on the flux of one tracer, its divergence and its divergent part.
 
         Parameters
         ----------
@@ -235,7 +247,7 @@ class Estimator:
 
         Returns
         -------
-        flux, divergence : ndarray, shape (layer,)
+        flux, divergence, divergent_flux : ndarray, shape (layer,)
             Coefficients of determination.
         """
         true = estimate.flux[name][None]
@@ -246,8 +258,11 @@ class Estimator:
         )
         of_flux = flux_skill(predicted, true, weights)
         of_divergence = divergence_skill(spread[0][None], spread[1][None], weights)
+        parts = self.gauge.divergent_part(np.stack([predicted, true]))
+        of_part = flux_skill(parts[0], parts[1], weights)
         # A flux that does not vary has a divergence of rounding errors only.
-        return of_flux, np.where(np.isnan(of_flux), np.nan, of_divergence)
+        still = np.isnan(of_flux)
+        return of_flux, np.where(still, np.nan, of_divergence), np.where(still, np.nan, of_part)
 
     def component_reliability(
         self, halves: tuple[GroupEstimate, ...], valid: BoolArray

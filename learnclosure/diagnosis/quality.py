@@ -286,6 +286,13 @@ def add_skill(
         "withheld_divergence_skill": (
             skill.divergence, "flux divergences", "the transport tensor",
         ),
+        "withheld_divergent_flux_skill": (
+            skill.divergent_flux, "divergent parts of eddy fluxes", "the transport tensor",
+        ),
+        "least_squares_withheld_divergent_flux_skill": (
+            skill.least_squares_divergent_flux, "divergent parts of eddy fluxes",
+            "plain least squares",
+        ),
         "least_squares_withheld_flux_skill": (
             skill.least_squares_flux, "eddy fluxes", "plain least squares",
         ),
