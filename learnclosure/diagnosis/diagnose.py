@@ -11,10 +11,13 @@ import xarray as xr
 
 from learnclosure import __version__
 from learnclosure.diagnosis.artefact import StatisticsBuilder
+from learnclosure.diagnosis.ceiling_artefact import add_ceilings
+from learnclosure.diagnosis.ceilings import estimate_ceilings
 from learnclosure.diagnosis.coarse import Coarsening
 from learnclosure.diagnosis.estimate import Estimator, GroupEstimate, WithheldSkill
 from learnclosure.diagnosis.inversion import SmoothInversion
 from learnclosure.diagnosis.moments import EnsembleSource, Moments, accumulate_moments
+from learnclosure.diagnosis.sampling import jackknife_standard_error
 from learnclosure.diagnosis.tensor import (
     condition_number,
     scalar_diffusivity,
@@ -73,8 +76,9 @@ def diagnose(
     valid = estimator.determined(whole.equations)
     _check_determined(ensemble, whole, valid)
     report(0.8, "jackknife")
-    error = estimator.standard_error(moments)
-    report(0.95, "skill")
+    left_out = estimator.left_out(moments)
+    error = None if left_out is None else jackknife_standard_error(left_out)
+    report(0.85, "skill")
     skill = estimator.withheld_skill(whole, ensemble.withheld_tracers, valid)
 
     builder = StatisticsBuilder(coarsening.x, coarsening.y, len(geometry.mask))
@@ -83,6 +87,16 @@ def diagnose(
     _add_tensor(builder, estimator, whole, valid, error)
     _add_quality(builder, ensemble, estimator, whole, halves, valid)
     _add_skill(builder, skill)
+    if halves and left_out is not None and chosen.ceiling_draws:
+        report(0.9, "ceilings")
+        names = (*ensemble.tracers, *ensemble.withheld_tracers)
+        add_ceilings(
+            builder,
+            estimate_ceilings(
+                moments, estimator, whole, halves, left_out, valid, names,
+                draws=chosen.ceiling_draws,
+            ),
+        )  # fmt: skip
     report(1.0, "done")
     return builder.build(_attributes(ensemble, chosen, inversion, skill))
 

@@ -10,7 +10,6 @@ import numpy.typing as npt
 from learnclosure.diagnosis.inversion import SmoothFit, SmoothInversion
 from learnclosure.diagnosis.moments import GroupMoments, Moments
 from learnclosure.diagnosis.sampling import (
-    jackknife_standard_error,
     spearman_brown,
     weighted_correlation,
 )
@@ -131,8 +130,8 @@ class Estimator:
         condition = condition_number(equations.M)
         return self.geometry.mask & (condition <= LARGEST_CONDITION_NUMBER)
 
-    def standard_error(self, moments: Moments) -> FloatArray | None:
-        """Compute the member jackknife error of the smooth tensor.
+    def left_out(self, moments: Moments) -> FloatArray | None:
+        """Fit the smooth tensor without each member in turn.
 
         Parameters
         ----------
@@ -140,18 +139,18 @@ class Estimator:
 
         Returns
         -------
-        ndarray, shape (layer, y, x, 2, 2), m2 s-1, or None
+        ndarray, shape (member, layer, y, x, 2, 2), m2 s-1, or None
             None with fewer than three members.
         """
         members = len(next(iter(moments.member_product.values())))
         if members < LEAST_MEMBERS_FOR_JACKKNIFE:
             return None
-        left_out = []
+        tensors = []
         for member in range(members):
             mean, flux = moments.without_member(member)
             equations = self.equations(flux, self.gradients(mean))
-            left_out.append(self.inversion.fit(equations).tensor)
-        return jackknife_standard_error(np.stack(left_out))
+            tensors.append(self.inversion.fit(equations).tensor)
+        return np.stack(tensors)
 
     def leverages(
         self, estimate: GroupEstimate, withheld: tuple[str, ...]

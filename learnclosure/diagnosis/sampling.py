@@ -59,12 +59,15 @@ def weighted_correlation(first: FloatArray, second: FloatArray, weights: FloatAr
         return np.asarray(np.where(scale > 0.0, covariance / np.sqrt(scale), np.nan))
 
 
-def spearman_brown(correlation: FloatArray) -> FloatArray:
-    """Reliability of a whole from the correlation of its halves, ``2r/(1+r)``.
+def spearman_brown(correlation: FloatArray, length: float | FloatArray = 2.0) -> FloatArray:
+    """Reliability of a whole from that of its parts, ``k r/(1 + (k - 1) r)``.
 
     Parameters
     ----------
     correlation : ndarray
+        Correlation ``r`` of two independent parts.
+    length : float or ndarray, optional
+        How many times ``k`` more the whole averages than a part; two halves make a whole.
 
     Returns
     -------
@@ -74,4 +77,4 @@ def spearman_brown(correlation: FloatArray) -> FloatArray:
         (Spearman 1910 and Brown 1910, British Journal of Psychology 3).
     """
     positive = np.maximum(correlation, 0.0)
-    return np.asarray(2.0 * positive / (1.0 + positive))
+    return np.asarray(length * positive / (1.0 + (length - 1.0) * positive))
