@@ -78,6 +78,27 @@ def member_counts(members: int) -> list[int]:
     return sorted({*counts, members - members % 2}) if counts else []
 
 
+def fits_needed(members: int, blocks: int, draws: int) -> int:
+    """Count the smooth inversions that measuring ceilings takes.
+
+    Parameters
+    ----------
+    members, blocks, draws : int
+        Members, blocks of time, and pairs of halves for each size.
+
+    Returns
+    -------
+    int
+    """
+    windows = sum(blocks // length for length in _window_lengths(blocks))
+    return 2 * draws * len(member_counts(members)) + 2 * windows
+
+
+def _window_lengths(blocks: int) -> list[int]:
+    """Blocks in a window, all of them excepted: 1, 2, 4 and so on."""
+    return [2**power for power in range(blocks.bit_length()) if 2**power < blocks]
+
+
 def _ladder(members: int) -> list[int]:
     """Sizes in steps of about a half, up to a few times more than there are members."""
     counts = [LEAST_MEMBERS]
@@ -204,8 +225,7 @@ def _snapshot_points(
     """
     found: dict[int, list[Fields]] = {}
     blocks, times = moments.blocks, moments.block_times
-    length = 1
-    while length < len(blocks):
+    for length in _window_lengths(len(blocks)):
         for start in range(0, len(blocks) - length + 1, length):
             part = slice(start, start + length)
             pair = [
@@ -213,7 +233,6 @@ def _snapshot_points(
                 for half in (0, 1)
             ]
             found.setdefault(sum(times[:length]), []).append(measurer.correlations(*pair))
-        length *= 2
     whole = measurer.correlations(*(measurer.of_group(half) for half in halves))
     found[sum(times)] = [whole]
     return found
@@ -303,6 +322,6 @@ def _replicates(
         for name, values in fields.items():
             without.setdefault(name, []).append(values)
     return {
-        name: NoiseReplicates(whole[name], np.stack(values), measurer.weights, kept)
+        name: NoiseReplicates(whole[name], values, measurer.weights, kept)
         for name, values in without.items()
     }

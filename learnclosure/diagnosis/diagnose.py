@@ -14,6 +14,7 @@ from learnclosure.diagnosis.artefact import StatisticsBuilder
 from learnclosure.diagnosis.ceiling_artefact import add_ceilings
 from learnclosure.diagnosis.ceilings import estimate_ceilings
 from learnclosure.diagnosis.coarse import Coarsening
+from learnclosure.diagnosis.degeneracy import check_information
 from learnclosure.diagnosis.estimate import Estimator, GroupEstimate, WithheldSkill
 from learnclosure.diagnosis.inversion import SmoothInversion
 from learnclosure.diagnosis.moments import EnsembleSource, Moments, accumulate_moments
@@ -69,6 +70,7 @@ def diagnose(
     moments = accumulate_moments(
         ensemble, coarsening, progress=lambda share: report(0.7 * share, "moments")
     )
+    check_information(moments, ensemble, geometry.mask)
     inversion = SmoothInversion(geometry, area, chosen, len(ensemble.tracers))
     estimator = Estimator(geometry, area, inversion, ensemble.tracers)
     whole = estimator.group(moments.whole)

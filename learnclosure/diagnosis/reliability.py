@@ -8,6 +8,7 @@ to ensembles of any size this is the general formula of Spearman 1910 and Brown 
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import NamedTuple
 
@@ -159,6 +160,15 @@ def layer_mean(values: FloatArray, axis: int = 0) -> FloatArray:
     return np.where(count > 0, total / np.maximum(count, 1), np.nan)
 
 
+def _products(values: FloatArray, share: FloatArray) -> FloatArray:
+    """Covariances over cells of every two members' fields, shape (layer, member, member)."""
+    departure = np.where(share > 0.0, values, 0.0)
+    departure -= (share * departure).sum(axis=(-2, -1), keepdims=True)
+    scaled = np.moveaxis(np.sqrt(share) * departure, 1, 0)
+    flat = scaled.reshape(*scaled.shape[:2], -1)
+    return np.asarray(flat @ flat.swapaxes(-2, -1))
+
+
 class NoiseReplicates:
     """Bootstrap replicates of the noise ratio of one quantity, from pseudo-values.
 
@@ -170,22 +180,29 @@ class NoiseReplicates:
     ----------
     whole : ndarray, shape (part, layer, y, x)
         Estimate from all members; parts are averaged.
-    left_out : ndarray, shape (member, part, layer, y, x)
-        Estimates without each member.
+    left_out : sequence of ndarray, shape (part, layer, y, x)
+        Estimates without each member in turn.
     weights : ndarray, shape (layer, y, x)
     choices : ndarray, shape (replicate, member)
         How often each replicate draws each member.
     """
 
     def __init__(
-        self, whole: FloatArray, left_out: FloatArray, weights: FloatArray, choices: FloatArray
+        self,
+        whole: FloatArray,
+        left_out: Sequence[FloatArray],
+        weights: FloatArray,
+        choices: FloatArray,
     ) -> None:
         count = len(left_out)
         share = weights / np.maximum(weights.sum(axis=(-2, -1), keepdims=True), 1e-300)
-        values = count * whole - (count - 1) * left_out
-        values = np.where(weights > 0.0, values, 0.0)
-        values -= (share * values).sum(axis=(-2, -1), keepdims=True)
-        gram = np.einsum("iplyx,jplyx,lyx->plij", values, values, share, optimize=True)
+        # One part after another, so that no more than that is in memory twice.
+        gram = np.stack(
+            [
+                _products(count * part - (count - 1) * np.stack(without), share)
+                for part, *without in zip(whole, *left_out, strict=True)
+            ]
+        )
         # Expected share of noise in the products of one and of two different pseudo-values.
         other = -1.0 / ((count - 1) * (count - 2))
         own = ((count - 1) ** 2 - 2.0 + 1.0 / (count - 1)) / (count - 2) ** 2
