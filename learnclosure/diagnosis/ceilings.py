@@ -136,9 +136,12 @@ class _Measurer:
         return self.of_tensors(group.flux, group.smooth.tensor, group.least_squares)
 
     def correlations(self, first: Fields, second: Fields) -> Fields:
-        """Correlate two estimates, shape (part, layer) each."""
+        """Correlate two estimates where both are determined, shape (part, layer) each."""
         return {
-            name: weighted_correlation(first[name], second[name], self.weights) for name in first
+            name: weighted_correlation(
+                one, other, np.where(np.isfinite(one + other), self.weights, 0.0)
+            )
+            for (name, one), other in zip(first.items(), second.values(), strict=True)
         }
 
 

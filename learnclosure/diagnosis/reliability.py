@@ -160,8 +160,10 @@ def layer_mean(values: FloatArray, axis: int = 0) -> FloatArray:
     return np.where(count > 0, total / np.maximum(count, 1), np.nan)
 
 
-def _products(values: FloatArray, share: FloatArray) -> FloatArray:
+def _products(values: FloatArray, weights: FloatArray) -> FloatArray:
     """Covariances over cells of every two members' fields, shape (layer, member, member)."""
+    weights = np.where(np.isfinite(values).all(axis=0), weights, 0.0)
+    share = weights / np.maximum(weights.sum(axis=(-2, -1), keepdims=True), 1e-300)
     departure = np.where(share > 0.0, values, 0.0)
     departure -= (share * departure).sum(axis=(-2, -1), keepdims=True)
     scaled = np.moveaxis(np.sqrt(share) * departure, 1, 0)
@@ -195,11 +197,10 @@ class NoiseReplicates:
         choices: FloatArray,
     ) -> None:
         count = len(left_out)
-        share = weights / np.maximum(weights.sum(axis=(-2, -1), keepdims=True), 1e-300)
         # One part after another, so that no more than that is in memory twice.
         gram = np.stack(
             [
-                _products(count * part - (count - 1) * np.stack(without), share)
+                _products(count * part - (count - 1) * np.stack(without), weights)
                 for part, *without in zip(whole, *left_out, strict=True)
             ]
         )
