@@ -118,8 +118,11 @@ def check_information(moments: Moments, source: EnsembleSource, wet: BoolArray) 
     where = f"region '{source.name}'"
     names = (*source.tracers, *source.withheld_tracers)
     whole = moments.whole
+    speed = float(np.sqrt(2.0 * np.abs(whole.eddy_kinetic_energy).max()))
     for name in names:
-        if not moments.member_product[name].any():
+        # The mean of equal numbers may differ from them by a rounding error.
+        rounding = LEAST_VARIATION * speed * float(np.abs(whole.mean[name]).max())
+        if np.abs(moments.member_product[name]).max() <= rounding:
             varies = _varies(whole.mean[name][wet])
             raise _without_eddies(where, name) if varies else _constant(where, name)
     for one, other in combinations(names, 2):
