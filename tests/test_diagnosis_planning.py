@@ -182,7 +182,7 @@ from learnclosure.ensemble.reader import open_ensemble
 from learnclosure.listing import plan_facts
 from learnclosure.study import DiagnosisSettings, EnsembleTable
 with open_ensemble(EnsembleTable(name="north", files="*.nc"), sys.argv[1]) as ensemble:
-    diagnose(ensemble, DiagnosisSettings(ceiling_draws=0, floor_method="projection"))
+    diagnose(ensemble, DiagnosisSettings(ceiling_draws=1, floor_method="projection"))
 print(resource.getrusage(resource.RUSAGE_SELF).ru_maxrss * 1024)
 """
 
@@ -216,9 +216,15 @@ def make_climatology(values):
     values["dye_b"] = np.broadcast_to(values["dye_b"][:, :1], values["dye_b"].shape).copy()
 
 
+def make_still(values):
+    for name in ("x_velocity", "y_velocity"):
+        values[name] = np.broadcast_to(values[name][:, :1], values[name].shape).copy()
+
+
 @pytest.mark.parametrize(
     ("change", "message"),
     [
+        (make_still, "the velocities are the same in all members, so there are no eddies"),
         (make_identical, r"two tracers are identical \(found 'dye_a' and 'dye_b'"),
         (make_constant, "dye_b: a tracer has no variance"),
         (make_climatology, "dye_b: a tracer is the same in all members and so has no eddies"),

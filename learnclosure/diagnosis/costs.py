@@ -150,11 +150,13 @@ def predicted_memory(
     at_once = min(times, int(getattr(ensemble, "times_read_at_once", 1)))
     one_time = 8.0 * members * layers * rows * columns * (2 + tracers + ensemble.has_buoyancy)
     sums = 8.0 * members * coarse.size * 3 * tracers
+    blocks = 8.0 * 2 * min(TIME_BLOCKS, times) * coarse.size * 3 * (1 + tracers)
     tensors = 8.0 * members * coarse.size * 8
     factors = FACTOR_BYTES * float(coarse.sum(axis=(1, 2)).max())
     return (
         PROGRAM_BYTES
         + stored_bytes * at_once / times
+        + blocks
         # Read, stacked, and their departures; sums, and their means.
         + max(3.0 * one_time + sums, 2.0 * sums + tensors + factors)
     )

@@ -38,6 +38,16 @@ def _without_eddies(where: str, name: str) -> DiagnosisError:
     )
 
 
+def _still(where: str) -> DiagnosisError:
+    return DiagnosisError(
+        "the velocities are the same in all members, so there are no eddies",
+        where=where,
+        found="a variance between members of zero",
+        expected="members that differ",
+        remedy="give members that were started differently",
+    )
+
+
 def _alike(where: str, one: str, other: str) -> DiagnosisError:
     return DiagnosisError(
         "two tracers are identical",
@@ -62,6 +72,10 @@ def _varies(values: FloatArray) -> bool:
     return bool(np.ptp(values) > LEAST_VARIATION * np.abs(values).max())
 
 
+def _same_in_all(values: FloatArray) -> bool:
+    return bool(np.array_equal(values, np.broadcast_to(values[0], values.shape)))
+
+
 def find_degenerate_fields(
     fields: dict[str, FloatArray], source: EnsembleSource
 ) -> Iterator[DiagnosisError]:
@@ -76,8 +90,8 @@ def find_degenerate_fields(
     Yields
     ------
     DiagnosisError
-        One for each tracer without variance or without eddies, each two identical tracers
-        and each two identical members.
+        One for still velocities, each tracer without variance or without eddies, each two
+        identical tracers and each two identical members.
     """
     wet = source.grid.geometry.mask
     where = f"region '{source.name}'"
@@ -85,10 +99,13 @@ def find_degenerate_fields(
     sea = {name: fields[name][:, wet] for name in ("x_velocity", "y_velocity", *names)}
     if not wet.any():
         return
+    velocities = [fields[name][:, wet] for name in ("x_velocity", "y_velocity")]
+    if all(_same_in_all(values) for values in velocities):
+        yield _still(where)
     for name in names:
         if not _varies(sea[name]):
             yield _constant(where, name)
-        elif np.array_equal(sea[name], np.broadcast_to(sea[name][0], sea[name].shape)):
+        elif _same_in_all(sea[name]):
             yield _without_eddies(where, name)
     for one, other in combinations(names, 2):
         if np.array_equal(sea[one], sea[other]):
@@ -113,12 +130,15 @@ def check_information(moments: Moments, source: EnsembleSource, wet: BoolArray) 
     Raises
     ------
     DiagnosisError
-        If a tracer has no variance or no eddies, or two tracers are identical.
+        If velocities or a tracer have no variance, or two tracers are identical.
     """
     where = f"region '{source.name}'"
     names = (*source.tracers, *source.withheld_tracers)
     whole = moments.whole
     speed = float(np.sqrt(2.0 * np.abs(whole.eddy_kinetic_energy).max()))
+    mean_speed = max(np.abs(whole.mean[name]).max() for name in ("x_velocity", "y_velocity"))
+    if speed <= LEAST_VARIATION * float(mean_speed):
+        raise _still(where)
     for name in names:
         # The mean of equal numbers may differ from them by a rounding error.
         rounding = LEAST_VARIATION * speed * float(np.abs(whole.mean[name]).max())
