@@ -183,7 +183,9 @@ def _curve(
         values.append(spearman_brown(here, freedom / last))
         errors.append(np.hypot(scatter, replicates.standard_error(freedom)))
     counts = np.asarray([*(count for count, *_ in points), *further], dtype=np.int64)
-    return CeilingCurve(counts, np.stack(values), np.stack(errors), len(points), offset)
+    value = np.stack(values)
+    error = np.where(np.isnan(value), np.nan, np.stack(errors))
+    return CeilingCurve(counts, value, error, len(points), offset)
 
 
 def _window(blocks: Sequence[GroupMoments], times: Sequence[int]) -> tuple[Fields, Fields]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import time
 from collections.abc import Sequence
 from dataclasses import fields as dataclass_fields
@@ -26,7 +27,8 @@ MOST_MEMBERS = 16
 MOST_TIMES = 8
 MOST_BYTES = 2e9
 """Bytes of fields that are looked at; two times at least, whatever their size."""
-RECORDED_MEMBERS = 4
+RECORDED_CELLS = 2_000
+"""Coarse cells a layer whose departures are noted, evenly spread."""
 SAMPLE_SIDE = 12
 
 
@@ -203,8 +205,10 @@ class Probe(_Part):
             small = {name: values[..., rows, columns].copy() for name, values in part.items()}
             self._kept.append(small)
         for name in ("x_velocity", "y_velocity", *self.tracers):
-            departure = part[name][:RECORDED_MEMBERS] - part[name].mean(axis=0)
-            self._recorded.setdefault(name, []).append(self.coarsening.mean(departure))
+            departure = self.coarsening.mean(part[name] - part[name].mean(axis=0))
+            flat = departure.reshape(*departure.shape[:2], -1)
+            step = math.ceil(flat.shape[-1] / RECORDED_CELLS)
+            self._recorded.setdefault(name, []).append(flat[..., ::step].copy())
         return part
 
     @property
@@ -213,5 +217,5 @@ class Probe(_Part):
         return Sample(self._ensemble, crop_grid(self.grid, self._small), self._kept)
 
     def departures(self, name: str) -> FloatArray:
-        """Return departures from the ensemble mean, shape (time, member, layer, y, x)."""
+        """Return departures from the ensemble mean, shape (time, member, layer, cell)."""
         return np.stack(self._recorded[name])

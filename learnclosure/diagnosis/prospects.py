@@ -138,7 +138,7 @@ def lag_correlation(departures: FloatArray) -> FloatArray:
 
     Parameters
     ----------
-    departures : ndarray, shape (time, member, layer, y, x)
+    departures : ndarray, shape (time, member, layer, ...)
 
     Returns
     -------
