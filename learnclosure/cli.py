@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
+import json
 import sys
 from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import click
 from rich.console import Console
@@ -145,8 +146,19 @@ def simulate(
 @commands.command(epilog=_example("learnclosure inspect study.toml"))
 @click.argument("study_file", metavar="STUDY", type=click.Path(path_type=Path), required=False)
 @click.option("--features", is_flag=True, help="List the features a closure may use and stop.")
-def inspect(study_file: Path | None, features: bool) -> None:
-    """Say what was understood of each ensemble and whether the STUDY can run."""
+@click.option(
+    "--target-error",
+    type=click.FloatRange(0.0, 1.0, min_open=True),
+    default=0.2,
+    show_default=True,
+    help="Relative error of the tensor's trace that members are counted for.",
+)
+@click.option("--json", "as_json", is_flag=True, help="Print JSON for other programs.")
+def inspect(study_file: Path | None, features: bool, target_error: float, as_json: bool) -> None:
+    """Say what was understood of each ensemble, what its diagnosis will cost and promise.
+
+    Everything that keeps the STUDY from running is listed.
+    """
     from learnclosure import listing
 
     if features:
@@ -154,23 +166,30 @@ def inspect(study_file: Path | None, features: bool) -> None:
         return
     if study_file is None:
         raise click.UsageError("give a STUDY, or --features")
-    from learnclosure.ensemble.readiness import inspect_ensemble
+    from learnclosure.inspection import inspect_study
     from learnclosure.study import read_study
 
     study = read_study(study_file)
     problems: list[str] = []
-    for table in study.ensembles:
-        readiness = inspect_ensemble(table, study.folder)
-        for part in listing.readiness_listing(readiness):
+    found: list[dict[str, Any]] = []
+    for inspection in inspect_study(study, target_error=target_error):
+        problems += inspection.readiness.problems
+        if as_json:
+            found.append(inspection.as_dict())
+            continue
+        for part in listing.readiness_listing(inspection.readiness, inspection.plan):
             console.print(part)
-        problems += readiness.problems
+    if as_json:
+        record = {"study": str(study_file), "ready": not problems, "ensembles": found}
+        click.echo(json.dumps(record, indent=1, allow_nan=False))
     if problems:
         raise InputError(
             f"the study cannot run: {len(problems)} problem(s), first: {problems[0]}",
             where=study_file,
             remedy="correct what is listed above",
         )
-    console.print(f"{study_file}: the study can run", markup=False, soft_wrap=True)
+    if not as_json:
+        console.print(f"{study_file}: the study can run", markup=False, soft_wrap=True)
 
 
 @commands.command(epilog=_example("learnclosure diagnose study.toml --workers 2"))

@@ -144,6 +144,13 @@ class DiagnosisSettings(Section):
     scalar_pull: float | None = Field(
         None, ge=0, description="pull to the local scalar fit; by default only for few tracers"
     )
+    ceiling_draws: int = Field(
+        4,
+        ge=0,
+        le=1000,
+        description="random pairs of halves for each number of members of the ceiling curves; "
+        "0 for no curves",
+    )
     flux: Literal["full", "divergent"] = Field(
         "full", description="invert the eddy fluxes or only their divergent parts"
     )
