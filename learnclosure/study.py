@@ -194,6 +194,9 @@ class ExportSettings(Section):
     citation: str = Field(
         "", max_length=2000, description="how to cite the bundle; by name and version if empty"
     )
+    single_precision: bool = Field(
+        True, description="ship a variant whose regressor computes in single precision"
+    )
     reference_points: int = Field(
         256, ge=8, le=100_000, description="points whose inputs and outputs ship for checking"
     )

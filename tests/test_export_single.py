@@ -15,6 +15,7 @@ from learnclosure.errors import BundleError
 from learnclosure.export.gate import verify_bundle
 from learnclosure.export.predictor import load_predictor
 from learnclosure.export.reference import SINGLE_LIMIT, largest_difference
+from learnclosure.study import ExportSettings
 
 
 @pytest.fixture(scope="module")
@@ -62,6 +63,13 @@ def test_trees_have_no_such_variant(tmp_path):
     assert not (folder / "closure_float32.onnx").exists()
     with pytest.raises(BundleError, match="has no variant in single precision; run it in double"):
         load_predictor(folder, single=True)
+
+
+def test_a_study_may_leave_it_out(tmp_path):
+    settings = ExportSettings(single_precision=False)
+    folder = export(tmp_path / "bundle", regressor="mlp", settings=settings)
+    assert not (folder / "closure_float32.onnx").exists()
+    assert verify_bundle(folder).passed
 
 
 @pytest.mark.parametrize(

@@ -97,7 +97,9 @@ def export_bundle(
     content = model.SerializeToString(deterministic=True)
     agreement = measure_agreement(model, content, inputs, expected)
     _require_agreement(agreement)
-    variant = single_variant(closure, metadata, inputs, expected)
+    variant = None
+    if settings.single_precision:
+        variant = single_variant(closure, metadata, inputs, expected)
     manifest = make_manifest(
         closure,
         settings,

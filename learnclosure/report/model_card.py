@@ -176,7 +176,7 @@ def render_model_card(manifest: Mapping[str, Any]) -> str:
         "A mesoscale eddy closure: from resolved mean fields to the eddy transport tensor K of "
         "`J = -K grad C` (m2 s-1; rows flux, columns gradient), its half-widths and a trust.",
         f"Family `{family}`: a host gives {needs}. Regressor `{manifest.get('regressor', '-')}`, "
-        f"target `{manifest.get('target', '-')}`. Licence {manifest.get('licence', '-')}.",
+        f"target `{manifest.get('target', '-')}`.",
         "## Read this first",
         "\n".join(f"* {text}" for text in CAUTIONS),
         "## Not for",
