@@ -213,7 +213,7 @@ def _require_audit(record: dict[str, object], path: Path) -> None:
     failed = failed_checks(record)
     if failed:
         raise CheckFailedError(
-            f"the audit failed: {'; '.join(failed)}",
+            f"the audit failed: {', '.join(failed)}",
             where=path,
             remedy="do not ship this closure; see the audit table in the report",
         )
@@ -300,10 +300,14 @@ def verify(bundle: Path | None, rules: bool, signers: Path | None, as_json: bool
         _print_json({"passed": outcome.passed, "checks": [vars(each) for each in outcome.checks]})
     else:
         console.print(listing.verification_listing(outcome))
-    failed = [f"{check.name}, rule {check.rule}" for check in outcome.checks if not check.passed]
+    failed = [
+        f"{check.name} by rule {check.rule}" if check.rule else check.name
+        for check in outcome.checks
+        if not check.passed
+    ]
     if failed:
         raise CheckFailedError(
-            f"the bundle failed: {'; '.join(failed)}",
+            f"the bundle failed: {', '.join(failed)}",
             where=bundle,
             remedy="do not load it; ask its author for an intact copy",
         )

@@ -4,6 +4,8 @@ import shutil
 import numpy as np
 import onnx
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
 from onnx import TensorProto, helper, numpy_helper
 
 from export_cases import export
@@ -13,6 +15,7 @@ from learnclosure.export.gate import verify_bundle
 from learnclosure.export.graph_checks import inspect_graph
 from learnclosure.export.layout import LARGEST_SIZES, sums_text
 from learnclosure.export.predictor import load_predictor
+from learnclosure.export.rules import RULES
 
 
 @pytest.fixture(scope="module")
@@ -157,6 +160,16 @@ def test_a_good_graph_passes_every_static_check(model):
 def test_bytes_that_are_no_graph_are_refused():
     assert inspect_graph(b"\xff" * 40)[0] is None
     assert inspect_graph(b"")[0] is None
+
+
+@settings(max_examples=60, deadline=None, derandomize=True)
+@given(place=st.floats(0.0, 0.999), cut=st.integers(0, 9), put=st.binary(max_size=6))
+def test_any_change_of_the_bytes_ends_in_a_verdict(good, place, cut, put):
+    content = (good / "closure.onnx").read_bytes()
+    start = int(place * len(content))
+    found, checks = inspect_graph(content[:start] + put + content[start + cut :])
+    assert (found is None) == (not checks[-1].passed)
+    assert found is not None or checks[-1].rule in RULES
 
 
 def test_an_operator_off_the_list_is_refused(model):

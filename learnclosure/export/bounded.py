@@ -67,9 +67,12 @@ def run_trial(
         "sizes": {name: len(content) for name, content in parts.items()},
     }
     name = "reference outputs"
+    if not sys.executable:
+        # Within a host that embeds Python there is no interpreter to start.
+        return [Check(name, False, "no Python interpreter to run it in", rule="run-limits")]
     try:
         done = subprocess.run(
-            [sys.executable, "-c", _CHILD.format(memory=memory, seconds=seconds)],
+            [sys.executable, "-P", "-c", _CHILD.format(memory=memory, seconds=seconds)],
             input=json.dumps(header).encode() + b"\n" + b"".join(parts.values()),
             capture_output=True,
             timeout=WALL_SECONDS,
