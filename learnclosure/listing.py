@@ -16,6 +16,8 @@ if TYPE_CHECKING:
 
     from learnclosure.diagnosis.planning import Plan
     from learnclosure.ensemble.readiness import Readiness
+    from learnclosure.export.checks import VerifyReport
+    from learnclosure.export.compare import Comparison
 
 SNAPSHOTS_MISS = (
     "snapshots miss the flux between them, accumulated total fluxes do not: snapshots every 5 "
@@ -212,3 +214,69 @@ def readiness_listing(readiness: Readiness, plan: Plan | None = None) -> list[Re
             found.add_row(text)
         parts.append(found)
     return parts
+
+
+def rule_listing() -> Table:
+    """List every rule a bundle is held to.
+
+    Returns
+    -------
+    rich.table.Table
+    """
+    from learnclosure.export.rules import RULES
+
+    table = _table("rules of the gate", "rule", "check", "what must hold")
+    for name, rule in RULES.items():
+        table.add_row(name, rule.check, rule.meaning)
+    return table
+
+
+def verification_listing(outcome: VerifyReport) -> Table:
+    """Tabulate the checks of a bundle.
+
+    Parameters
+    ----------
+    outcome : VerifyReport
+
+    Returns
+    -------
+    rich.table.Table
+    """
+    table = _table(str(outcome.folder), "check", "result", "found", "rule")
+    for check in outcome.checks:
+        table.add_row(check.name, "passed" if check.passed else "FAILED", check.found, check.rule)
+    return table
+
+
+def comparison_listing(comparison: Comparison) -> list[Table]:
+    """Tabulate what sets two bundles apart.
+
+    Parameters
+    ----------
+    comparison : Comparison
+
+    Returns
+    -------
+    list of rich.table.Table
+    """
+
+    def cell(value: str | float | None) -> str:
+        return _number(value) if value is None or isinstance(value, float) else value
+
+    rows = _table("differences beyond rounding", "topic", "what", "first", "second")
+    for row in comparison.differences:
+        if row.topic != "output":
+            rows.add_row(row.topic, row.name, cell(row.first), cell(row.second))
+    outputs = _table(
+        "outputs on the reference inputs of the first", "output", "largest difference over spread"
+    )
+    for name, value in comparison.outputs.items():
+        outputs.add_row(name, f"{value:.1e}")
+    if not comparison.outputs:
+        outputs.add_row("all", "the second needs inputs the first has not")
+    speed = _table("processor time", "first", "second", "second over first")
+    speed.add_row(
+        *(f"{1e6 * value:.2f} us a point" for value in comparison.seconds),
+        f"{comparison.speed_ratio:.2f}",
+    )
+    return [rows, outputs, speed]

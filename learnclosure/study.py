@@ -10,7 +10,15 @@ import tomllib
 from pathlib import Path
 from typing import Annotated, Literal
 
-from pydantic import BaseModel, ConfigDict, Field, ValidationError, model_validator
+from packaging.licenses import InvalidLicenseExpression, canonicalize_license_expression
+from pydantic import (
+    BaseModel,
+    ConfigDict,
+    Field,
+    ValidationError,
+    field_validator,
+    model_validator,
+)
 
 from learnclosure.errors import StudyError
 
@@ -245,9 +253,23 @@ class ExportSettings(Section):
 
     version: str = Field("0.1.0", pattern=r"^\d+\.\d+\.\d+$", description="version of the bundle")
     licence: str = Field("CC-BY-4.0", description="SPDX expression for the bundle")
+    citation: str = Field(
+        "", max_length=2000, description="how to cite the bundle; by name and version if empty"
+    )
+    single_precision: bool = Field(
+        True, description="ship a variant whose regressor computes in single precision"
+    )
     reference_points: int = Field(
         256, ge=8, le=100_000, description="points whose inputs and outputs ship for checking"
     )
+
+    @field_validator("licence")
+    @classmethod
+    def _spdx(cls, text: str) -> str:
+        try:
+            return str(canonicalize_license_expression(text))
+        except InvalidLicenseExpression:
+            raise ValueError("is no SPDX licence expression, such as CC-BY-4.0") from None
 
 
 class Study(Section):

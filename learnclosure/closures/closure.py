@@ -24,6 +24,7 @@ from learnclosure.closures.pointwise import (
     Outputs,
     Prepared,
     blended,
+    flagged,
     half_widths_on_axes,
     on_model_axes,
 )
@@ -286,7 +287,9 @@ class Closure:
             If an input is missing, has another length or holds a value that is not finite.
         """
         values, prepared, raw = self._raw(inputs)
-        outputs = self.finish(np, raw, prepared, values)
+        made = self.finish(np, raw, prepared, values)
+        given = [values[name] for name in self.inputs_]
+        outputs = flagged(np, given, made, self.settings.floor)
         count = len(raw[0])
         return Prediction(
             tensor=stacked(outputs.tensor, count),
