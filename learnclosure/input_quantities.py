@@ -152,27 +152,37 @@ INPUTS: dict[str, Quantity] = rows(
         ),
         Quantity(
             "jet_distance", "d/W", "1",
+            "distance from the jet axis of the section in jet widths, positive to the left of "
+            "the flow", "input", parity="pseudo-scalar", locality="along-jet",
+            validity="between -10 and 10; zero where there is no jet",
+        ),
+        Quantity("jet_speed", "Uj", "m s-1", "speed on the jet axis of the section", "input",
+                 locality="along-jet"),
+        Quantity("jet_width", "W", "m", "width of the jet in the section, W of exp(-(d/W)^2)",
+                 "input", locality="along-jet"),
+        Quantity(
+            "axis_distance", "d/W", "1",
             "distance from the nearest jet axis in jet widths, positive to the left of the flow",
             "input", parity="pseudo-scalar", locality="along-jet",
             validity="between -10 and 10; zero where there is no jet",
         ),
-        Quantity("jet_speed", "Uj", "m s-1", "speed on the nearest jet axis", "input",
+        Quantity("axis_speed", "Uj", "m s-1", "speed on the nearest jet axis", "input",
                  locality="along-jet", validity="zero where there is no jet"),
-        Quantity("jet_width", "W", "m", "width of the nearest jet, W of exp(-(d/W)^2)", "input",
+        Quantity("axis_width", "W", "m", "width of the nearest jet, W of exp(-(d/W)^2)", "input",
                  locality="along-jet",
                  validity="the deformation radius where there is no jet"),
         *(
             Quantity(
-                f"jet_axis_{axis}", f"a{axis}", "1",
+                f"axis_direction_{axis}", f"a{axis}", "1",
                 f"direction along {axis} of the flow on the nearest jet axis, a unit vector",
                 "input", parity="vector", locality="along-jet",
                 validity="zero where there is no jet",
             )
             for axis in "xy"
         ),
-        Quantity("jet_presence", "", "1", "1 where there is a jet to be near to, else 0",
+        Quantity("axis_presence", "", "1", "1 where there is a jet to be near to, else 0",
                  "input", locality="along-jet"),
-        Quantity("along_jet_distance", "s/W", "1",
+        Quantity("along_axis_distance", "s/W", "1",
                  "distance downstream of where the nearest jet is fastest, in jet widths",
                  "input", locality="along-jet",
                  validity="between -100 and 100; zero where there is no jet"),

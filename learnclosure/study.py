@@ -8,16 +8,37 @@ from __future__ import annotations
 
 import tomllib
 from pathlib import Path
-from typing import Annotated, Literal
+from typing import Annotated, Literal, get_args
 
 from pydantic import BaseModel, ConfigDict, Field, ValidationError, model_validator
 
 from learnclosure.errors import StudyError
+from learnclosure.features.frames import Frame
+from learnclosure.features.point_features import FeatureGroup
 
 Face = Literal["center", "east", "west", "north", "south"]
 Family = Literal["mean-field", "local-energy"]
 Regressor = Literal["ridge", "extra-trees", "histogram-boosting", "mlp", "trees-and-mlp"]
 Target = Literal["linear", "log-cholesky"]
+BaselineName = Literal[
+    "constant",
+    "eady-visbeck",
+    "eady-visbeck-published",
+    "stone",
+    "stone-published",
+    "held-larichev",
+    "held-larichev-published",
+    "eke-mixing-length",
+    "eke-mixing-length-published",
+    "bates",
+    "bates-published",
+    "ferrari-nikurashin",
+    "ferrari-nikurashin-published",
+    "energy-bounded",
+    "energy-bounded-published",
+    "constant-tuned",
+    "local-scalar",
+]
 
 
 class Section(BaseModel):
@@ -136,9 +157,14 @@ class DiagnosisSettings(Section):
 
 
 class FeatureSettings(Section):
-    """Which frame tensors and vectors are learned in."""
+    """What a closure sees of a point, and in which frame tensors and vectors are learned."""
 
-    frame: Literal["pv-gradient"] = Field("pv-gradient", description="local frame")
+    groups: tuple[FeatureGroup, ...] = Field(
+        ("standard",),
+        min_length=1,
+        description="features taken together: standard, or all of a kind of physics",
+    )
+    frame: Frame = Field("pv-gradient", description="local frame")
 
 
 class ClosureSettings(Section):
@@ -175,6 +201,9 @@ class ValidationSettings(Section):
     folds: int = Field(4, ge=2, le=20, description="folds of the random and blocked splits")
     block_cells: int = Field(
         8, ge=1, description="side of a spatial block, coarse cells; less in small regions"
+    )
+    baselines: tuple[BaselineName, ...] = Field(
+        get_args(BaselineName), description="classical closures scored beside the learned ones"
     )
 
 

@@ -83,7 +83,7 @@ def _candidates(
         flow = left_of(inputs["x_velocity"], inputs["y_velocity"], LEAST_FLOW)
         return [flow, up("pv_gradient")]
     if frame == "jet":
-        axis = left_of(inputs["jet_axis_x"], inputs["jet_axis_y"], LEAST_AXIS)
+        axis = left_of(inputs["axis_direction_x"], inputs["axis_direction_y"], LEAST_AXIS)
         return [axis, up("pv_gradient")]
     return [up("pv_gradient")]
 
@@ -98,8 +98,8 @@ def frame_axes(xp: Any, inputs: Mapping[str, Any], frame: Frame = "pv-gradient")
     inputs : mapping of str to array
         With ``coriolis_parameter`` in s-1 and ``pv_gradient_x``, ``pv_gradient_y`` in
         m-1 s-1, or ``planetary_beta_x``, ``planetary_beta_y`` for ``fixed``; for ``flow``
-        also the velocity in m s-1, for ``jet`` the unit vector ``jet_axis_x``,
-        ``jet_axis_y``.
+        also the velocity in m s-1, for ``jet`` the unit vector ``axis_direction_x``,
+        ``axis_direction_y``.
     frame : {"pv-gradient", "flow", "jet", "fixed"}, optional
         What the first axis follows.
 

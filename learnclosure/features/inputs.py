@@ -11,6 +11,7 @@ import numpy as np
 import numpy.typing as npt
 
 from learnclosure.ensemble.grid import gradient
+from learnclosure.features.beside_jet import place_beside_jets
 from learnclosure.features.boundaries import land_distance
 from learnclosure.features.frames import Frame, frame_axes
 from learnclosure.features.instability import (
@@ -157,6 +158,7 @@ def _place_inputs(state: MeanState, radius: FloatArray) -> dict[str, FloatArray]
     topographic_x, topographic_y = topographic_beta(state)
     slope_x, slope_y = depth_gradient(state)
     jet = find_jet(state)
+    beside = place_beside_jets(state)
     return {
         "topographic_beta_x": topographic_x,
         "topographic_beta_y": topographic_y,
@@ -164,11 +166,14 @@ def _place_inputs(state: MeanState, radius: FloatArray) -> dict[str, FloatArray]
         "topographic_slope_y": slope_y[0],
         "jet_distance": jet.distance,
         "jet_speed": jet.speed,
-        "jet_width": np.where(jet.found, jet.width, radius),
-        "jet_axis_x": jet.axis_x,
-        "jet_axis_y": jet.axis_y,
-        "jet_presence": jet.found.astype(np.float64),
-        "along_jet_distance": jet.along,
+        "jet_width": jet.width,
+        "axis_distance": beside.distance,
+        "axis_speed": beside.speed,
+        "axis_width": np.where(beside.found, beside.width, radius),
+        "axis_direction_x": beside.axis_x,
+        "axis_direction_y": beside.axis_y,
+        "axis_presence": beside.found.astype(np.float64),
+        "along_axis_distance": beside.along,
         "land_distance": land_distance(state.geometry),
         "cell_width": np.sqrt(state.geometry.area),
     }
@@ -209,14 +214,15 @@ def input_flags(
     Returns
     -------
     dict of str to ndarray of bool, shape (layer, y, x)
-        ``no_stratification``, ``no_jet``, ``no_rotation``, ``no_beta``, ``no_flow``,
-        ``no_shear`` and ``frame_undefined``, where another direction stands in.
+        ``no_stratification``, ``no_jet`` in the section through the cell, ``no_jet_axis``
+        in the domain, ``no_rotation``, ``no_beta``, ``no_flow``, ``no_shear`` and ``frame_undefined``, where another direction stands in.
     """
     mask = state.geometry.mask
     inputs = compute_inputs(state)
     flags = {
         "no_stratification": unstratified(state),
-        "no_jet": inputs["jet_presence"] == 0.0,
+        "no_jet": ~find_jet(state).found,
+        "no_jet_axis": inputs["axis_presence"] == 0.0,
         "no_rotation": state.coriolis_parameter == 0.0,
         "no_beta": np.hypot(state.planetary_beta_x, state.planetary_beta_y) == 0.0,
         "no_flow": np.hypot(inputs["x_velocity"], inputs["y_velocity"]) == 0.0,

@@ -1,7 +1,7 @@
-"""Where the jets are, how wide and how fast, and where each column lies beside them.
+"""Where the jet is, how wide and how fast, and how far each column is from its axis.
 
-An axis is a ridge of the speed of the top layer: a line of cells faster than what lies to
-the left and to the right of their own flow. It follows meanders, and there may be several.
+Found section by section, which takes one jet that keeps its direction; for meanders that
+turn back and for several jets see ``learnclosure.features.beside_jet``.
 """
 
 from __future__ import annotations
@@ -11,58 +11,90 @@ from typing import NamedTuple
 import numpy as np
 import numpy.typing as npt
 
-from learnclosure.features.jet_axes import JetAxes, find_axes
 from learnclosure.features.mean_state import MeanState
-from learnclosure.features.nearest import nearest_marked
 
 FloatArray = npt.NDArray[np.float64]
 
 LARGEST_DISTANCE = 10.0
 """Distances from the axis are limited to this many jet widths."""
-LARGEST_ALONG_DISTANCE = 100.0
-"""Distances along the axis are limited to this many jet widths."""
+LEAST_CONTRAST = 0.02
+"""A jet stands out from the median flow of its section by at least this, m s-1."""
 
 
 class Jet(NamedTuple):
-    """The nearest jet of the top layer, as fields on (y, x).
+    """The jet of the top layer, as fields on (y, x).
 
     Attributes
     ----------
     distance : ndarray, 1
         Distance from the axis over the jet's width, positive to the left of the flow.
     speed : ndarray, m s-1
-        Speed on the nearest part of the axis.
+        Speed on the axis of the section through the cell.
     width : ndarray, m
-        ``W`` of the profile ``exp(-(d/W)^2)`` there.
-    axis_x, axis_y : ndarray, 1
-        Direction of the flow there.
-    along : ndarray, 1
-        Distance downstream of the fastest point of the axis, over the jet's width.
-    number : ndarray of int
-        Number of the jet, from 0; -1 where there is none.
+        ``W`` of the profile ``exp(-(d/W)^2)`` with the same second moment.
     found : ndarray of bool
-        False where there is no jet in the whole domain; everything is zero there.
+        False where the section has no jet; the distance is zero there.
     """
 
     distance: FloatArray
     speed: FloatArray
     width: FloatArray
-    axis_x: FloatArray
-    axis_y: FloatArray
-    along: FloatArray
-    number: npt.NDArray[np.int64]
     found: npt.NDArray[np.bool_]
 
 
-def _no_jet(shape: tuple[int, ...]) -> Jet:
-    zero = np.zeros(shape)
+def _running_mean(values: FloatArray, wet: FloatArray, axis: int, periodic: bool) -> FloatArray:
+    """Mean of each cell and its sea neighbours on both sides."""
+    total, count = values * wet, wet.copy()
+    for step in (1, -1):
+        shifted, there = np.roll(values * wet, step, axis), np.roll(wet, step, axis)
+        if not periodic:
+            edge = [slice(None)] * values.ndim
+            edge[axis] = slice(0, 1) if step > 0 else slice(-1, None)
+            shifted[tuple(edge)] = 0.0
+            there[tuple(edge)] = 0.0
+        total, count = total + shifted, count + there
+    return np.asarray(total / np.maximum(count, 1.0))
+
+
+def _sections(
+    flow: FloatArray, width: FloatArray, wet: FloatArray, periodic: bool, left: float
+) -> Jet:
+    """Analyse sections that run along the first axis of (across, along) fields.
+
+    ``left`` is 1 if the left of a positive flow lies towards larger indices, else -1.
+    """
+    speed = np.abs(flow) * wet
+    excess = np.maximum(speed - np.median(speed, axis=0), 0.0)
+    axis_row = np.argmax(speed, axis=0)
+    along = np.arange(flow.shape[1])
+    position = np.cumsum(width, axis=0) - 0.5 * width
+    offset = position - position[axis_row, along]
+    if periodic:
+        length = width.sum(axis=0)
+        offset = offset - length * np.round(offset / length)
+    peak = speed[axis_row, along]
+    weight = excess * excess
+    total = weight.sum(axis=0)
+    # The square of exp(-(d/W)^2) has the variance W^2 / 4.
+    second = (weight * offset * offset).sum(axis=0) / np.where(total > 0.0, total, 1.0)
+    jet_width = np.maximum(2.0 * np.sqrt(second), width.mean(axis=0))
+    found = excess[axis_row, along] > LEAST_CONTRAST
+    sign = left * np.where(flow[axis_row, along] < 0.0, -1.0, 1.0)
+    distance = np.clip(sign * offset / jet_width, -LARGEST_DISTANCE, LARGEST_DISTANCE)
+    spread = np.ones_like(flow)
     return Jet(
-        zero, zero, zero, zero, zero, zero, np.full(shape, -1, np.int64), np.zeros(shape, bool)
+        distance=np.where(found, distance, 0.0),
+        speed=peak * spread,
+        width=jet_width * spread,
+        found=np.asarray(found & (spread > 0.0)),
     )
 
 
 def find_jet(state: MeanState) -> Jet:
-    """Find the jets of the top layer and place every column beside the nearest.
+    """Find the jet of the top layer section by section.
+
+    Sections cross the direction, x or y, along which the layer has more kinetic energy;
+    the flow is smoothed over three cells each way, the axis is its fastest point.
 
     Parameters
     ----------
@@ -72,44 +104,16 @@ def find_jet(state: MeanState) -> Jet:
     -------
     Jet
     """
-    shape = state.geometry.dx.shape
-    axes = find_axes(state.x_velocity[0], state.y_velocity[0], state.geometry)
-    if not len(axes.row):
-        return _no_jet(shape)
-    marked = np.zeros(shape, bool)
-    marked[axes.row, axes.column] = True
-    place = np.full(shape, -1)
-    place[axes.row, axes.column] = np.arange(len(axes.row))
-    nearest = nearest_marked(marked, state.geometry)
-    which = place[nearest.row, nearest.column]
-    return _beside(axes, which, nearest.along_x, nearest.along_y, state)
-
-
-def _beside(
-    axes: JetAxes,
-    which: npt.NDArray[np.int64],
-    along_x: FloatArray,
-    along_y: FloatArray,
-    state: MeanState,
-) -> Jet:
-    """Place cells beside their points of the axes, given the way from those cells."""
-    tangent_x, tangent_y = axes.tangent_x[which], axes.tangent_y[which]
-    # The axis passes its cell at this distance to the left of the centre.
-    left = -tangent_y * along_x + tangent_x * along_y - axes.offset[which]
-    ahead = tangent_x * along_x + tangent_y * along_y
-    cell = np.sqrt(state.geometry.area)
-    # Within a cell of the point the axis itself goes on; beyond that it has come to an end.
-    past_end = np.maximum(np.abs(ahead) - cell, 0.0)
-    width = axes.width[which]
-    size = np.hypot(left, past_end) / width
-    downstream = (axes.along[which] + np.clip(ahead, -cell, cell)) / width
-    return Jet(
-        distance=np.where(left < 0.0, -1.0, 1.0) * np.minimum(size, LARGEST_DISTANCE),
-        speed=axes.speed[which],
-        width=width,
-        axis_x=tangent_x,
-        axis_y=tangent_y,
-        along=np.clip(downstream, -LARGEST_ALONG_DISTANCE, LARGEST_ALONG_DISTANCE),
-        number=axes.number[which],
-        found=np.ones(which.shape, bool),
-    )
+    geometry = state.geometry
+    wet = geometry.mask[0].astype(np.float64)
+    eastward, northward = state.x_velocity[0] * wet, state.y_velocity[0] * wet
+    along_x = np.sum(eastward**2) >= np.sum(northward**2)
+    flow = eastward if along_x else northward
+    flow = _running_mean(flow, wet, 0, geometry.periodic_y)
+    flow = _running_mean(flow, wet, 1, geometry.periodic_x)
+    if along_x:
+        # North lies to the left of an eastward flow.
+        return _sections(flow, geometry.dy, wet, geometry.periodic_y, 1.0)
+    # West lies to the left of a northward flow.
+    turned = _sections(flow.T, geometry.dx.T, wet.T, geometry.periodic_x, -1.0)
+    return Jet(turned.distance.T, turned.speed.T, turned.width.T, turned.found.T)

@@ -16,10 +16,14 @@ IndexArray = npt.NDArray[np.int64]
 
 LEAST_CONTRAST = 0.02
 """An axis is faster than the median of the domain by at least this, m s-1."""
-LEAST_SHARE = 0.25
-"""And by this share of the excess of the fastest point."""
+LEAST_SHARE = 0.1
+"""And by this share of the excess of the fastest point of the domain."""
+LEAST_PEAK_SHARE = 0.3
+"""Share of that excess the fastest point of an axis has at least."""
 LEAST_POINTS = 4
-"""Axes of fewer points, or shorter than one jet width, are no jets."""
+"""Axes of fewer points are no jets."""
+LEAST_LENGTH = 1.5
+"""Neither are axes shorter than this many of their widths."""
 REACH = 2
 """Points of an axis are linked over at most this many cells along either axis."""
 LEAST_ALIGNMENT = 0.3
@@ -285,9 +289,14 @@ def find_axes(eastward: FloatArray, northward: FloatArray, geometry: Geometry) -
     width = _widths(surface, ridge)
     kept = np.full(len(ridge.row), -1)
     jets = 0
+    weakest = surface.background + LEAST_PEAK_SHARE * (
+        surface.speed.max(initial=0.0) - surface.background
+    )
     for axis in range(int(number.max(initial=-1)) + 1):
         here = number == axis
-        if here.sum() < LEAST_POINTS or np.ptp(along[here]) < np.median(width[here]):
+        if here.sum() < LEAST_POINTS or ridge.speed[here].max() < weakest:
+            continue
+        if np.ptp(along[here]) < LEAST_LENGTH * np.median(width[here]):
             continue
         kept[here] = jets
         jets += 1

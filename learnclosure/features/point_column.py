@@ -35,7 +35,7 @@ def log_frequency_ratio(p: Point) -> Any:
 @feature
 def burger_number(p: Point) -> Any:
     """Square of deformation radius over jet width."""
-    ratio = p.radius / p.xp.maximum(p["jet_width"], LEAST_WIDTH)
+    ratio = p.radius / p.xp.maximum(p["axis_width"], LEAST_WIDTH)
     return p.xp.minimum(ratio * ratio, LARGEST_BURGER)
 
 

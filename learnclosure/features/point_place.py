@@ -74,7 +74,7 @@ def depth_contour_crossing(p: Point) -> Any:
 
 @feature
 def jet_distance(p: Point) -> Any:
-    """Signed distance from the nearest jet axis in jet widths."""
+    """Signed distance from the jet axis of the section in jet widths."""
     return p.hemisphere * p["jet_distance"]
 
 
@@ -91,37 +91,55 @@ def jet_speed_ratio(p: Point) -> Any:
 
 
 @feature
+def axis_distance(p: Point) -> Any:
+    """Signed distance from the nearest jet axis in jet widths, following meanders."""
+    return p.hemisphere * p["axis_distance"]
+
+
+@feature
+def axis_width_ratio(p: Point) -> Any:
+    """Width of the nearest jet over deformation radius."""
+    return p.bounded(p["axis_width"] / p.radius)
+
+
+@feature
+def axis_speed_ratio(p: Point) -> Any:
+    """Speed on the nearest jet axis over the drift of long waves."""
+    return p.bounded(p["axis_speed"] / p.drift)
+
+
+@feature
 def jet_zone(p: Point) -> Any:
     """Core, flank or neither."""
-    away = p.xp.abs(p["jet_distance"])
+    away = p.xp.abs(p["axis_distance"])
     zone = p.xp.where(away < CORE_EDGE, 2.0, p.xp.where(away < FLANK_EDGE, 1.0, 0.0))
-    return p.xp.where(p["jet_presence"] > 0.5, zone, 0.0)
+    return p.xp.where(p["axis_presence"] > 0.5, zone, 0.0)
 
 
 @feature
 def jet_profile(p: Point) -> Any:
     """Profile of the nearest jet at the point."""
-    away = p["jet_distance"]
+    away = p["axis_distance"]
     profile = p.xp.exp(-p.xp.minimum(away * away, FARTHEST_PROFILE))
-    return p.xp.where(p["jet_presence"] > 0.5, profile, 0.0)
+    return p.xp.where(p["axis_presence"] > 0.5, profile, 0.0)
 
 
 @feature
-def along_jet_distance(p: Point) -> Any:
+def along_axis_distance(p: Point) -> Any:
     """Distance downstream of where the nearest jet is fastest, in jet widths."""
-    return p["along_jet_distance"]
+    return p["along_axis_distance"]
 
 
 @feature
-def jet_axis_across(p: Point) -> Any:
+def axis_across(p: Point) -> Any:
     """Direction of the nearest jet axis along the first axis."""
-    return p.in_frame(*p.pair("jet_axis"))[0]
+    return p.in_frame(*p.pair("axis_direction"))[0]
 
 
 @feature
-def jet_axis_along(p: Point) -> Any:
+def axis_along(p: Point) -> Any:
     """Direction of the nearest jet axis along the second axis."""
-    return p.in_frame(*p.pair("jet_axis"))[1]
+    return p.in_frame(*p.pair("axis_direction"))[1]
 
 
 @feature
