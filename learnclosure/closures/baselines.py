@@ -307,9 +307,7 @@ class FerrariNikurashin(Baseline):
     def _unit_diffusivity(self, xp: Any, inputs: Mapping[str, Any]) -> Any:
         energy = xp.maximum(inputs["eddy_kinetic_energy"], 0.0)
         wavenumber = 1.0 / xp.maximum(inputs["deformation_radius"], 1.0)
-        return suppressed_diffusivity(
-            energy, 1.0 / MEMORY, wavenumber, _relative_speed(xp, inputs)
-        )
+        return suppressed_diffusivity(energy, 1.0 / MEMORY, wavenumber, _relative_speed(xp, inputs))
 
 
 class EnergyBounded(Baseline):

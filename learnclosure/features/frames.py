@@ -55,7 +55,7 @@ class Axes(NamedTuple):
 
 
 def _direction(xp: Any, along_x: Any, along_y: Any, least: float) -> tuple[Any, Any, Any]:
-    """Unit vector along a vector, and the comparison that tells where there is one."""
+    """Return the unit vector along a vector, and the comparison that tells where there is one."""
     # Scaling first keeps the squares of such small numbers from underflowing.
     largest = xp.maximum(xp.abs(along_x), xp.abs(along_y))
     safe = xp.maximum(largest, least)
@@ -116,6 +116,7 @@ def frame_axes(xp: Any, inputs: Mapping[str, Any], frame: Frame = "pv-gradient")
         ny = xp.where(there, y, ny)
         defined = xp.where(there, 1.0, defined)
     return Axes(nx, ny, -(hemisphere * ny), hemisphere * nx, defined, own)
+
 
 def vector_to_frame(xp: Any, axes: Axes, x: Any, y: Any) -> tuple[Any, Any]:  # noqa: ARG001
     """Components of a vector in the local frame.

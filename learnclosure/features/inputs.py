@@ -200,9 +200,7 @@ def compute_inputs(state: MeanState) -> dict[str, FloatArray]:
     return {name: np.where(mask, fields[name], 0.0) for name in INPUTS if name in fields}
 
 
-def input_flags(
-    state: MeanState, frame: Frame = "pv-gradient"
-) -> dict[str, npt.NDArray[np.bool_]]:
+def input_flags(state: MeanState, frame: Frame = "pv-gradient") -> dict[str, npt.NDArray[np.bool_]]:
     """Tell where an input is a stand-in because the quantity is undefined.
 
     Parameters
@@ -215,7 +213,8 @@ def input_flags(
     -------
     dict of str to ndarray of bool, shape (layer, y, x)
         ``no_stratification``, ``no_jet`` in the section through the cell, ``no_jet_axis``
-        in the domain, ``no_rotation``, ``no_beta``, ``no_flow``, ``no_shear`` and ``frame_undefined``, where another direction stands in.
+        in the domain, ``no_rotation``, ``no_beta``, ``no_flow``, ``no_shear`` and
+        ``frame_undefined``, where another direction stands in.
     """
     mask = state.geometry.mask
     inputs = compute_inputs(state)

@@ -114,9 +114,7 @@ def phillips_criticality(state: MeanState) -> FloatArray:
     return np.asarray(np.max(np.where(bounded, opposed / safe, unstable), axis=0))
 
 
-def pv_gradient_reversal(
-    state: MeanState, along_x: FloatArray, along_y: FloatArray
-) -> FloatArray:
+def pv_gradient_reversal(state: MeanState, along_x: FloatArray, along_y: FloatArray) -> FloatArray:
     """Least cosine between the potential vorticity gradient of a layer and any other's.
 
     Parameters

@@ -90,7 +90,9 @@ class _Surface:
         for down in (0, 1):
             for right in (0, 1):
                 j, i = low_row + down, low_column + right
-                share = np.abs(1 - down - (row - low_row)) * np.abs(1 - right - (column - low_column))
+                share = np.abs(1 - down - (row - low_row)) * np.abs(
+                    1 - right - (column - low_column)
+                )
                 inside = np.ones(row.shape, bool)
                 if not self.geometry.periodic_y:
                     inside &= (j >= 0) & (j < rows)
@@ -180,10 +182,8 @@ def _links(ridge: _Ridge, geometry: Geometry) -> list[list[tuple[int, float]]]:
     return links
 
 
-def _order(
-    ridge: _Ridge, links: list[list[tuple[int, float]]]
-) -> tuple[IndexArray, FloatArray]:
-    """Number the axes and measure the distance downstream from the fastest point of each."""
+def _order(ridge: _Ridge, links: list[list[tuple[int, float]]]) -> tuple[IndexArray, FloatArray]:
+    """Give each axis a number, measure distances downstream from the fastest point of each."""
     number = np.full(len(ridge.row), -1)
     along = np.zeros(len(ridge.row))
     axes = 0
@@ -302,6 +302,14 @@ def find_axes(eastward: FloatArray, northward: FloatArray, geometry: Geometry) -
         jets += 1
         width[here] = _smooth_along(width[here], along[here])
     keep = kept >= 0
-    parts = (ridge.row, ridge.column, ridge.offset, ridge.tangent_x, ridge.tangent_y, ridge.speed,
-             width, along, kept)  # fmt: skip
-    return JetAxes(*(part[keep] for part in parts))
+    return JetAxes(
+        row=ridge.row[keep],
+        column=ridge.column[keep],
+        offset=ridge.offset[keep],
+        tangent_x=ridge.tangent_x[keep],
+        tangent_y=ridge.tangent_y[keep],
+        speed=ridge.speed[keep],
+        width=width[keep],
+        along=along[keep],
+        number=kept[keep],
+    )

@@ -112,7 +112,7 @@ def nearest_marked(marked: BoolArray, geometry: Geometry) -> Nearest:
     """
     positions = Positions(geometry)
     rows, columns = marked.shape
-    here_row, here_column = np.indices(marked.shape)
+    here_row, here_column = (np.asarray(part, np.int64) for part in np.indices(marked.shape))
     row = np.where(marked, here_row, -1)
     column = np.where(marked, here_column, -1)
     along_x = np.where(marked, 0.0, np.inf)

@@ -33,21 +33,6 @@ class Point:
     inputs : mapping of str to array
         Rows of ``quantities.INPUTS`` in SI units.
     frame : {"pv-gradient", "flow", "jet", "fixed"}, optional
-
-    Attributes
-    ----------
-    axes : Axes
-        Local frame.
-    hemisphere : array, 1
-        Sign of the Coriolis parameter, 1 at the equator.
-    coriolis : array, s-1
-        Size of the Coriolis parameter, at least 1e-6.
-    radius : array, m
-        First deformation radius.
-    beta : array, m-1 s-1
-        Size of the gradient of the Coriolis parameter.
-    drift : array, m s-1
-        Speed of long Rossby waves ``beta Ld2``, at least 1e-4.
     """
 
     def __init__(self, xp: Any, inputs: Mapping[str, Any], frame: Frame = "pv-gradient") -> None:
@@ -86,26 +71,32 @@ class Point:
 
     @cached_property
     def axes(self) -> Axes:
+        """Local frame."""
         return frame_axes(self.xp, self.inputs, self.frame)
 
     @cached_property
     def hemisphere(self) -> Any:
+        """Sign of the Coriolis parameter, 1 at the equator."""
         return self.xp.where(self["coriolis_parameter"] < 0.0, -1.0, 1.0)
 
     @cached_property
     def coriolis(self) -> Any:
+        """Size of the Coriolis parameter, s-1, at least 1e-6."""
         return self.xp.maximum(self.xp.abs(self["coriolis_parameter"]), LEAST_CORIOLIS)
 
     @cached_property
     def radius(self) -> Any:
+        """First deformation radius, m."""
         return self.xp.maximum(self["deformation_radius"], LEAST_RADIUS)
 
     @cached_property
     def beta(self) -> Any:
+        """Size of the gradient of the Coriolis parameter, m-1 s-1."""
         return planetary_beta(self.xp, self.inputs)
 
     @cached_property
     def drift(self) -> Any:
+        """Speed of long Rossby waves ``beta Ld2``, m s-1, at least 1e-4."""
         return self.xp.maximum(self.beta * self.radius * self.radius, LEAST_DRIFT)
 
     @cached_property

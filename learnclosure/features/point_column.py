@@ -107,7 +107,7 @@ def flow_rhines_ratio(p: Point) -> Any:
 
 @feature
 def layer_index(p: Point) -> Any:
-    """Number of the layer."""
+    """Return the number of the layer."""
     return p["layer_index"]
 
 

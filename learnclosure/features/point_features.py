@@ -8,7 +8,7 @@ dimension and see pure numbers only.
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from typing import Any, Literal
+from typing import Any, Literal, get_args
 
 from learnclosure.features import point_column, point_energy, point_gradients, point_place
 from learnclosure.features.frames import Frame
@@ -33,6 +33,7 @@ FeatureGroup = Literal[
 CATALOGUE = (point_gradients, point_column, point_place, point_energy)
 """Modules whose functions are registered by being imported."""
 STANDARD: tuple[FeatureGroup, ...] = ("standard",)
+EVERY_GROUP: tuple[FeatureGroup, ...] = get_args(FeatureGroup)
 
 
 def chosen_features(energy: bool, groups: Sequence[FeatureGroup] = STANDARD) -> list[Quantity]:
@@ -54,7 +55,7 @@ def chosen_features(energy: bool, groups: Sequence[FeatureGroup] = STANDARD) -> 
     return [
         row
         for row in FEATURES.values()
-        if (row.standard and "standard" in groups or row.topic in groups)
+        if ((row.standard and "standard" in groups) or row.topic in groups)
         and (row.units == "1" if energy else not row.energy)
     ]
 

@@ -41,7 +41,7 @@ def rossby_number(p: Point) -> Any:
 
 @feature
 def normal_strain_ratio(p: Point) -> Any:
-    """Normal strain in the frame over f."""
+    """Strain along the first axis against the second, in the frame over f."""
     return p.strain_in_frame[0] / p.coriolis
 
 
@@ -90,7 +90,7 @@ def divergence_ratio(p: Point) -> Any:
 
 @feature
 def gradient_determinant(p: Point) -> Any:
-    """Determinant of the velocity gradient tensor over f squared."""
+    """Return the determinant of the velocity gradient tensor over f squared."""
     determinant = (
         p["velocity_gradient_xx"] * p["velocity_gradient_yy"]
         - p["velocity_gradient_xy"] * p["velocity_gradient_yx"]
@@ -188,7 +188,7 @@ def shear_flow_sine(p: Point) -> Any:
 
 
 def _along(p: Point, a: tuple[Any, Any], b: tuple[Any, Any]) -> Any:
-    """``a . grad(U) . b``: how the velocity component along a grows along b."""
+    """Increase along b of the velocity component along a, ``a . grad(U) . b``."""
     grown_x = p["velocity_gradient_xx"] * b[0] + p["velocity_gradient_xy"] * b[1]
     grown_y = p["velocity_gradient_yx"] * b[0] + p["velocity_gradient_yy"] * b[1]
     return a[0] * grown_x + a[1] * grown_y

@@ -18,6 +18,7 @@ SHORTEST_RADIUS = 1e3
 LONGEST_RADIUS = 500e3
 """Largest deformation radius, m; stands in where there is no rotation at all."""
 
+
 def stable_reduced_gravity(state: MeanState) -> FloatArray:
     """Reduced gravity with neutral and unstable interfaces raised to a least value.
 

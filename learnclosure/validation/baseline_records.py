@@ -85,9 +85,7 @@ def baseline_record(
     if held_out is not None:
         tensor = _baseline_tensor(final, held_out)
         for region in held_out.regions:
-            regions[region] = region_record(
-                "test", region_scores(held_out, tensor, truths[region])
-            )
+            regions[region] = region_record("test", region_scores(held_out, tensor, truths[region]))
     return {
         "family": kind.family,
         "parameters": final.parameters(),

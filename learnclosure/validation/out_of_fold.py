@@ -91,7 +91,7 @@ class Task:
     family: str
     candidates: tuple[Candidate, ...]
     fold: Fold
-    features: FeatureSettings = FeatureSettings()
+    features: FeatureSettings
 
 
 Answer = list[tuple[FloatArray, FloatArray, FloatArray]]
