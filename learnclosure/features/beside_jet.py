@@ -80,7 +80,9 @@ def place_beside_jets(state: MeanState) -> BesideJet:
     marked[axes.row, axes.column] = True
     place = np.full(shape, -1)
     place[axes.row, axes.column] = np.arange(len(axes.row))
-    nearest = nearest_marked(marked, state.geometry)
+    speed = np.zeros(shape)
+    speed[axes.row, axes.column] = axes.speed
+    nearest = nearest_marked(marked, state.geometry, speed)
     which = place[nearest.row, nearest.column]
     return _beside(axes, which, nearest.along_x, nearest.along_y, state)
 

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections import deque
+import heapq
 from typing import NamedTuple
 
 import numpy as np
@@ -65,6 +65,9 @@ class JetAxes(NamedTuple):
     width: FloatArray
     along: FloatArray
     number: IndexArray
+
+
+Links = list[list[tuple[int, float, float]]]
 
 
 class _Surface:
@@ -150,13 +153,13 @@ def _ridge(surface: _Surface) -> _Ridge:
     return _Ridge(*(part[top] for part in parts))
 
 
-def _links(ridge: _Ridge, geometry: Geometry) -> list[list[tuple[int, float]]]:
-    """Points linked to each point, with the distance downstream to them in m."""
+def _links(ridge: _Ridge, geometry: Geometry) -> Links:
+    """Points linked to each point, with the distances downstream and straight to them in m."""
     rows, columns = geometry.dx.shape
     positions = Positions(geometry)
     place = np.full((rows, columns), -1)
     place[ridge.row, ridge.column] = np.arange(len(ridge.row))
-    links: list[list[tuple[int, float]]] = [[] for _ in ridge.row]
+    links: Links = [[] for _ in ridge.row]
     for down in range(-REACH, REACH + 1):
         for right in range(-REACH, REACH + 1):
             if not (down or right):
@@ -178,11 +181,12 @@ def _links(ridge: _Ridge, geometry: Geometry) -> list[list[tuple[int, float]]]:
             size = np.where(linked, np.hypot(mean_x, mean_y), 1.0)
             distance = (along_x * mean_x + along_y * mean_y) / size
             for point in np.nonzero(linked)[0]:
-                links[point].append((int(other[point]), float(distance[point])))
+                straight = float(np.hypot(along_x[point], along_y[point]))
+                links[point].append((int(other[point]), float(distance[point]), straight))
     return links
 
 
-def _order(ridge: _Ridge, links: list[list[tuple[int, float]]]) -> tuple[IndexArray, FloatArray]:
+def _order(ridge: _Ridge, links: Links) -> tuple[IndexArray, FloatArray]:
     """Give each axis a number, measure distances downstream from the fastest point of each."""
     number = np.full(len(ridge.row), -1)
     along = np.zeros(len(ridge.row))
@@ -190,15 +194,16 @@ def _order(ridge: _Ridge, links: list[list[tuple[int, float]]]) -> tuple[IndexAr
     for start in np.argsort(-ridge.speed, kind="stable"):
         if number[start] >= 0:
             continue
-        number[start] = axes
-        waiting = deque([int(start)])
+        # The shortest way from the fastest point decides, whatever the order of the cells.
+        waiting = [(0.0, int(start), 0.0)]
         while waiting:
-            point = waiting.popleft()
-            for other, distance in links[point]:
+            length, point, downstream = heapq.heappop(waiting)
+            if number[point] >= 0:
+                continue
+            number[point], along[point] = axes, downstream
+            for other, distance, straight in links[point]:
                 if number[other] < 0:
-                    number[other] = axes
-                    along[other] = along[point] + distance
-                    waiting.append(other)
+                    heapq.heappush(waiting, (length + straight, other, downstream + distance))
         axes += 1
     return number, along
 

@@ -16,6 +16,10 @@ IndexArray = npt.NDArray[np.int64]
 NEIGHBOURS = [(-1, -1), (-1, 0), (-1, 1), (0, -1), (0, 1), (1, -1), (1, 0), (1, 1)]
 
 
+EQUAL = 1e-9
+"""Relative difference of squared distances that are the same but for rounding."""
+
+
 class Nearest(NamedTuple):
     """The nearest marked cell of every cell, as fields on (y, x).
 
@@ -88,7 +92,9 @@ class Positions:
         )
 
 
-def nearest_marked(marked: BoolArray, geometry: Geometry) -> Nearest:
+def nearest_marked(
+    marked: BoolArray, geometry: Geometry, preference: FloatArray | None = None
+) -> Nearest:
     """Find the nearest marked cell of every cell.
 
     Candidates spread over the grid in jumps of halving length, and in single steps at the
@@ -100,6 +106,8 @@ def nearest_marked(marked: BoolArray, geometry: Geometry) -> Nearest:
     marked : ndarray of bool, shape (y, x)
     geometry : Geometry
         Land does not stand in the way.
+    preference : ndarray, shape (y, x), optional
+        Of marked cells at equal distance the one with the largest is taken.
 
     Returns
     -------
@@ -117,6 +125,7 @@ def nearest_marked(marked: BoolArray, geometry: Geometry) -> Nearest:
     column = np.where(marked, here_column, -1)
     along_x = np.where(marked, 0.0, np.inf)
     along_y = along_x.copy()
+    rank = np.zeros(marked.shape) if preference is None else preference
     jumps = [1 << power for power in reversed(range(max(rows, columns).bit_length()))]
     for jump in (*jumps, 1, 1):
         for down, right in NEIGHBOURS:
@@ -130,7 +139,10 @@ def nearest_marked(marked: BoolArray, geometry: Geometry) -> Nearest:
             its_row, its_column = row[place], column[place]
             inside &= its_row >= 0
             x, y = positions.way(its_row, its_column, here_row, here_column)
-            better = inside & (x * x + y * y < along_x**2 + along_y**2)
+            square, known = x * x + y * y, along_x**2 + along_y**2
+            equal = (square >= known * (1.0 - EQUAL)) & (square <= known * (1.0 + EQUAL))
+            preferred = equal & (rank[its_row, its_column] > rank[row, column])
+            better = inside & (((square < known) & ~equal) | preferred)
             row, column = np.where(better, its_row, row), np.where(better, its_column, column)
             along_x, along_y = np.where(better, x, along_x), np.where(better, y, along_y)
     return Nearest(row, column, along_x, along_y)
