@@ -108,9 +108,7 @@ def test_growth_rates_and_criticality_of_the_eady_column():
     found = features(eady_column(levels=50))
     radius = RADIUS * 1.00016451
     np.testing.assert_allclose(found["eady_coriolis_ratio"] * 1e-4, 7.74542e-7, rtol=1e-6)
-    np.testing.assert_allclose(
-        found["eady_drift_ratio"], 7.74542e-7 / (2e-11 * radius), rtol=1e-5
-    )
+    np.testing.assert_allclose(found["eady_drift_ratio"], 7.74542e-7 / (2e-11 * radius), rtol=1e-5)
     np.testing.assert_allclose(found["eady_diffusivity"], 7.74542e-7 * radius**2, rtol=1e-5)
 
 
@@ -124,17 +122,13 @@ def test_phillips_criticality_is_one_at_both_limits(shear, criticality):
     u = np.array([shear, 0.0])[:, None, None]
     for sign in (1.0, -1.0):
         state = mean_state(u=u, beta=2e-11, coriolis=sign * 1e-4)
-        np.testing.assert_allclose(
-            features(state)["phillips_criticality"], criticality, atol=1e-12
-        )
+        np.testing.assert_allclose(features(state)["phillips_criticality"], criticality, atol=1e-12)
 
 
 def test_phillips_criticality_turns_with_the_axes():
     # Eastward is where the gradient of f lies to the left: along y if f grows along -x.
     state = mean_state(v=np.array([0.24, 0.0])[:, None, None])
-    turned = type(state)(
-        **{**state.__dict__, "planetary_beta_x": np.full((12, 14), -2e-11)}
-    )
+    turned = type(state)(**{**state.__dict__, "planetary_beta_x": np.full((12, 14), -2e-11)})
     np.testing.assert_allclose(features(turned)["phillips_criticality"], 2.0, atol=1e-12)
 
 

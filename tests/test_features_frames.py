@@ -7,13 +7,17 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from features_cases import random_inputs
 from learnclosure.export.builder import GraphBuilder
 from learnclosure.export.trace import Traced, TracingNamespace
 from learnclosure.features.frames import frame_axes, tensor_to_frame, tensor_to_model
 from learnclosure.features.point_features import EVERY_GROUP, point_features
-from learnclosure.validation.symmetry import REFLECTION, rotation, transform_inputs
-from learnclosure.validation.symmetry import transform_tensor
-from test_features_points import random_inputs
+from learnclosure.validation.symmetry import (
+    REFLECTION,
+    rotation,
+    transform_inputs,
+    transform_tensor,
+)
 
 FRAMES = ("pv-gradient", "flow", "jet", "fixed")
 quiet = settings(max_examples=25, derandomize=True, deadline=None)

@@ -7,7 +7,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from features_cases import coordinates, mean_state
+from features_cases import coordinates, mean_state, random_inputs
 from learnclosure.errors import RoleError
 from learnclosure.features.frames import frame_axes, tensor_to_frame, tensor_to_model
 from learnclosure.features.inputs import compute_inputs, input_flags
@@ -24,30 +24,6 @@ REFLECTION = ((1.0, 0.0), (0.0, -1.0))
 
 def rotation(angle):
     return ((np.cos(angle), -np.sin(angle)), (np.sin(angle), np.cos(angle)))
-
-
-def random_inputs(seed, count=40):
-    random = np.random.default_rng(seed)
-    inputs = {name: random.normal(size=count) for name in INPUTS}
-    for name in inputs:
-        if name.startswith(("pv_gradient_x", "pv_gradient_y", "planetary_beta")):
-            inputs[name] *= 2e-11
-        if name.startswith(("topographic_beta", "vorticity_gradient")):
-            inputs[name] *= 2e-11
-        if name.startswith("velocity_gradient"):
-            inputs[name] *= 1e-6
-        if name.startswith("shear_rate"):
-            inputs[name] *= 1e-5
-    inputs["coriolis_parameter"] *= 1e-4
-    for name, size in (
-        ("deformation_radius", 3e4), ("jet_width", 8e4), ("eddy_kinetic_energy", 0.05),
-        ("eddy_kinetic_energy_column", 0.02), ("eady_growth_rate", 1e-6), ("jet_speed", 0.4),
-        ("axis_width", 8e4), ("axis_speed", 0.4), ("buoyancy_frequency_squared", 4e-6),
-        ("land_distance", 1e5), ("cell_width", 3e4), ("second_deformation_radius", 1e4),
-        ("wkb_deformation_radius", 3e4),
-    ):  # fmt: skip
-        inputs[name] = np.abs(inputs[name]) * size + 0.1 * size
-    return inputs
 
 
 @pytest.mark.parametrize(

@@ -59,9 +59,7 @@ def test_a_known_local_scalar_explains_the_fluxes_it_made():
     data = statistics("alpha", 3, tensor=tensor, halves=False)
     data["scalar_diffusivity"] = data["transport_tensor_xx"]
     table = table_from_statistics([data])
-    made = bound_record(
-        "local-scalar", table, None, {"alpha": flux_truth(data)}, {"alpha": data}
-    )
+    made = bound_record("local-scalar", table, None, {"alpha": flux_truth(data)}, {"alpha": data})
     assert made is not None
     assert made["family"] == "diagnosed"
     found = made["regions"]["alpha"]

@@ -136,7 +136,7 @@ def vertical_modes(state: MeanState) -> VerticalModes:
 
 
 def gravity_wave_speed(state: MeanState) -> FloatArray:
-    """Speed of the first baroclinic long gravity wave.
+    """Speed of the first baroclinic long gravity wave, as ``vertical_modes`` has it.
 
     Parameters
     ----------
@@ -147,7 +147,12 @@ def gravity_wave_speed(state: MeanState) -> FloatArray:
     ndarray, shape (y, x), m s-1
         Zero where the column has no interface.
     """
-    return vertical_modes(state).first_speed
+    there = np.any(state.interface_wet, axis=0)
+    if not len(state.interface_wet):
+        return np.zeros(there.shape)
+    matrix = _interface_matrix(state, stable_reduced_gravity(state))
+    smallest = np.linalg.eigvalsh(matrix)[..., 0]
+    return np.where(there, 1.0 / np.sqrt(np.where(there, smallest, 1.0)), 0.0)
 
 
 def wkb_speed(state: MeanState) -> FloatArray:
