@@ -41,13 +41,16 @@ def feature_listing() -> Table:
     rich.table.Table
     """
     table = _table(
-        "what a closure may use", "name", "kind", "units", "parity", "locality", "meaning", "source"
-    )
+        f"what a closure may use: {len(INPUTS)} inputs a host gives, {len(FEATURES)} features "
+        "made of them", "name", "kind", "group", "units", "parity", "locality", "meaning",
+        "validity", "source",
+    )  # fmt: skip
     for quantity in (*INPUTS.values(), *FEATURES.values()):
         kind = f"{quantity.group}, eddy energy" if quantity.energy else quantity.group
+        groups = ("standard",) * quantity.standard + (quantity.topic,) * bool(quantity.topic)
         table.add_row(
-            quantity.name, kind, quantity.units, quantity.parity, quantity.locality,
-            quantity.long_name, quantity.source,
+            quantity.name, kind, ", ".join(groups), quantity.units, quantity.parity,
+            quantity.locality, quantity.long_name, quantity.validity, quantity.source,
         )  # fmt: skip
     return table
 

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import tomllib
 from pathlib import Path
-from typing import Annotated, Literal
+from typing import Annotated, Literal, get_args
 
 from packaging.licenses import InvalidLicenseExpression, canonicalize_license_expression
 from pydantic import (
@@ -21,6 +21,8 @@ from pydantic import (
 )
 
 from learnclosure.errors import StudyError
+from learnclosure.features.frames import Frame
+from learnclosure.features.point_features import FeatureGroup
 
 Face = Literal["center", "east", "west", "north", "south"]
 Family = Literal["mean-field", "local-energy"]
@@ -31,6 +33,25 @@ GaugeBoundary = Literal["no-flux", "zero-potential", "least-flux"]
 
 RADIUS_OVER_SMOOTHING = 1.5
 """The tensor is kept smooth over two thirds of what eddies blur gradients over."""
+BaselineName = Literal[
+    "constant",
+    "eady-visbeck",
+    "eady-visbeck-published",
+    "stone",
+    "stone-published",
+    "held-larichev",
+    "held-larichev-published",
+    "eke-mixing-length",
+    "eke-mixing-length-published",
+    "bates",
+    "bates-published",
+    "ferrari-nikurashin",
+    "ferrari-nikurashin-published",
+    "energy-bounded",
+    "energy-bounded-published",
+    "constant-tuned",
+    "local-scalar",
+]
 
 
 class Section(BaseModel):
@@ -206,9 +227,14 @@ class DiagnosisSettings(Section):
 
 
 class FeatureSettings(Section):
-    """Which frame tensors and vectors are learned in."""
+    """What a closure sees of a point, and in which frame tensors and vectors are learned."""
 
-    frame: Literal["pv-gradient"] = Field("pv-gradient", description="local frame")
+    groups: tuple[FeatureGroup, ...] = Field(
+        ("standard",),
+        min_length=1,
+        description="features taken together: standard, or all of a kind of physics",
+    )
+    frame: Frame = Field("pv-gradient", description="local frame")
 
 
 class ClosureSettings(Section):
@@ -245,6 +271,9 @@ class ValidationSettings(Section):
     folds: int = Field(4, ge=2, le=20, description="folds of the random and blocked splits")
     block_cells: int = Field(
         8, ge=1, description="side of a spatial block, coarse cells; less in small regions"
+    )
+    baselines: tuple[BaselineName, ...] = Field(
+        get_args(BaselineName), description="classical closures scored beside the learned ones"
     )
 
 
