@@ -40,6 +40,12 @@ class VariableNames(Section):
     buoyancy: str | None = Field(None, description="buoyancy")
     temperature: str | None = Field(None, description="temperature, for the stratification")
     salinity: str | None = Field(None, description="salinity, for the stratification")
+    potential_vorticity: str | None = Field(
+        None, description="potential vorticity, for the active side of the diagnosis"
+    )
+    thickness: str | None = Field(
+        None, description="layer thickness at each time, m, for the active side of the diagnosis"
+    )
 
 
 class GridLayout(Section):
@@ -78,6 +84,12 @@ class GridLayout(Section):
     )
     latitude: str | float | None = Field(
         None, description="variable or value of the latitude, degrees north"
+    )
+    potential_vorticity_gradient: float | tuple[float, ...] | None = Field(
+        None, description="gradient along y that potential_vorticity leaves out, one or one a layer"
+    )
+    thickness_gradient: float | tuple[float, ...] | None = Field(
+        None, description="gradient along y that thickness leaves out, one or one a layer, m per m"
     )
     dx: str | float | None = Field(None, description="variable or value of the cell width, m")
     dy: str | float | None = Field(None, description="variable or value of the cell width, m")

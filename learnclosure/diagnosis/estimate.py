@@ -24,6 +24,7 @@ from learnclosure.diagnosis.tensor import (
     leverage,
     normal_equations,
 )
+from learnclosure.ensemble.active import ACTIVE
 from learnclosure.ensemble.grid import Geometry, divergence, gradient
 
 FloatArray = npt.NDArray[np.float64]
@@ -115,12 +116,12 @@ class Estimator:
         -------
         GroupEstimate
         """
-        means = {name: moments.mean[name] for name in moments.flux}
-        gradients = self.gradients(means)
-        equations = self.equations(moments.flux, gradients)
+        fluxes = {name: flux for name, flux in moments.flux.items() if name not in ACTIVE}
+        gradients = self.gradients({name: moments.mean[name] for name in fluxes})
+        equations = self.equations(fluxes, gradients)
         return GroupEstimate(
             gradient=gradients,
-            flux=moments.flux,
+            flux=fluxes,
             equations=equations,
             smooth=self.inversion.fit(equations),
             least_squares=least_squares_tensor(equations),

@@ -30,6 +30,8 @@ class EnsembleSource(Protocol):
     withheld_tracers: tuple[str, ...]
     units: dict[str, str]
     has_buoyancy: bool
+    active: tuple[str, ...]
+    left_out_gradients: dict[str, FloatArray]
     assumptions: tuple[str, ...]
 
     def fields(self, time: int) -> dict[str, FloatArray]:
@@ -46,14 +48,39 @@ class GroupMoments:
     mean : dict of str to ndarray, shape (layer, y, x)
         Ensemble and time means of velocities, tracers and buoyancy.
     flux : dict of str to ndarray, shape (2, layer, y, x)
-        Time mean of the unbiased (N - 1) covariance of velocity and each tracer.
+        Time mean of the unbiased (N - 1) covariance of velocity and each tracer or active
+        field.
     eddy_kinetic_energy : ndarray, shape (layer, y, x), m2 s-2
         From unbiased variances.
+    covariance : dict of pair of str to ndarray, shape (layer, y, x)
+        Time mean of the unbiased covariances `covariance_pairs` asks for.
     """
 
     mean: dict[str, FloatArray]
     flux: dict[str, FloatArray]
     eddy_kinetic_energy: FloatArray
+    covariance: dict[tuple[str, str], FloatArray]
+
+
+def covariance_pairs(active: tuple[str, ...]) -> tuple[tuple[str, str], ...]:
+    """Pairs of fields whose covariance the energetics of the active side need.
+
+    Parameters
+    ----------
+    active : tuple of str
+        Active fields.
+
+    Returns
+    -------
+    tuple of pair of str
+        Momentum fluxes and the variance of each active field; none without active fields.
+    """
+    if not active:
+        return ()
+    momentum = (
+        ("x_velocity", "x_velocity"), ("x_velocity", "y_velocity"), ("y_velocity", "y_velocity"),
+    )  # fmt: skip
+    return (*momentum, *((name, name) for name in active))
 
 
 @dataclass(frozen=True)
@@ -110,6 +137,7 @@ class _Group:
         self.mean: dict[str, FloatArray] = {}
         self.flux: dict[str, FloatArray] = {}
         self.energy: FloatArray | None = None
+        self.covariance: dict[tuple[str, str], FloatArray] = {}
 
     def add_mean(self, name: str, coarse: FloatArray) -> None:
         value = coarse[self.members].mean(axis=0)
@@ -123,24 +151,31 @@ class _Group:
         value = summed / (len(self.members) - 1)
         self.energy = value if self.energy is None else self.energy + value
 
+    def add_covariance(self, pair: tuple[str, str], summed: FloatArray) -> None:
+        value = summed / (len(self.members) - 1)
+        self.covariance[pair] = self.covariance[pair] + value if pair in self.covariance else value
+
     def finish(self, times: int) -> GroupMoments:
         assert self.energy is not None
         return GroupMoments(
             mean={name: total / times for name, total in self.mean.items()},
             flux={name: total / times for name, total in self.flux.items()},
             eddy_kinetic_energy=self.energy / times,
+            covariance={pair: total / times for pair, total in self.covariance.items()},
         )
 
 
 class _Snapshot:
     """Departures of one time and the coarse sums of their products over groups."""
 
-    def __init__(self, fields: dict[str, FloatArray], coarsening: Coarsening) -> None:
+    def __init__(
+        self, fields: dict[str, FloatArray], coarsening: Coarsening, active: tuple[str, ...]
+    ) -> None:
         self.coarsening = coarsening
         self.departure = {
             name: values - values.mean(axis=0)
             for name, values in fields.items()
-            if name != "buoyancy"
+            if name != "buoyancy" or name in active
         }
 
     def products(self, first: str, second: str) -> FloatArray:
@@ -206,7 +241,7 @@ def accumulate_moments(
     halves: list[_Group] = []
     if count >= LEAST_MEMBERS_FOR_HALVES:
         halves = [_Group(everyone[0::2]), _Group(everyone[1::2])]
-    names = (*source.tracers, *source.withheld_tracers)
+    names = (*source.tracers, *source.withheld_tracers, *source.active)
     member_mean: dict[str, FloatArray] = {}
     member_product: dict[str, FloatArray] = {}
     times = len(source.times)
@@ -219,7 +254,7 @@ def accumulate_moments(
             if name in names:
                 known = member_mean.get(name)
                 member_mean[name] = coarse if known is None else known + coarse
-        snapshot = _Snapshot(fields, coarsening)
+        snapshot = _Snapshot(fields, coarsening, source.active)
         energy = [snapshot.products(axis, axis) for axis in ("x_velocity", "y_velocity")]
         whole.add_energy(0.5 * (energy[0] + energy[1]).sum(axis=0))
         for half in halves:
@@ -228,6 +263,11 @@ def accumulate_moments(
                 for axis, products in zip(("x_velocity", "y_velocity"), energy, strict=True)
             ]
             half.add_energy(0.5 * (parts[0] + parts[1]))
+        for pair in covariance_pairs(source.active):
+            products = snapshot.products(*pair)
+            whole.add_covariance(pair, products.sum(axis=0))
+            for half in halves:
+                half.add_covariance(pair, snapshot.group_sum(products, *pair, half.members))
         for name in names:
             pairs = [snapshot.products(axis, name) for axis in ("x_velocity", "y_velocity")]
             both = np.stack(pairs, axis=1)

@@ -13,8 +13,9 @@ import numpy as np
 
 from learnclosure.atomic import atomic_folder
 from learnclosure.errors import InputError
-from learnclosure.simulate.dynamics import Channel, ridge_height
+from learnclosure.simulate.dynamics import Channel, ridge_height, uniform_gradients
 from learnclosure.simulate.files import (
+    ActiveLabel,
     Layout,
     MemberFile,
     TracerLabel,
@@ -45,6 +46,25 @@ def _silent(region: str, share: float, note: str) -> None:
     """Report nothing."""
 
 
+def _active_labels(regime: ChannelRegime) -> tuple[ActiveLabel, ...]:
+    slopes = uniform_gradients(regime)
+    return (
+        ActiveLabel(
+            "potential_vorticity",
+            "quasi-geostrophic potential vorticity without its uniform gradient",
+            "s-1",
+            slopes["potential_vorticity"],
+        ),
+        ActiveLabel(
+            "thickness",
+            "layer thickness at the time without its uniform gradient",
+            "m",
+            slopes["thickness"],
+            "cell_thickness",
+        ),
+    )
+
+
 def _layout(regime: ChannelRegime, times: Sequence[float]) -> Layout:
     return Layout(
         title=f"two-layer quasi-geostrophic channel, invented region {regime.name}",
@@ -60,6 +80,7 @@ def _layout(regime: ChannelRegime, times: Sequence[float]) -> Layout:
         periodic="x y",
         times=np.array(times),
         tracers=tuple(TracerLabel(wave.name, wave.long_name, wave.role) for wave in CHANNEL_WAVES),
+        active=_active_labels(regime),
     )
 
 
@@ -111,11 +132,18 @@ def _run_to(channel: Channel, step: int, stopwatch: _Stopwatch) -> None:
 
 def _write_snapshot(channel: Channel, files: Sequence[MemberFile], time: int) -> None:
     u, v = channel.centre_velocities()
+    thickness = channel.layer_thicknesses()
     for member, file in enumerate(files):
         tracers = {
             wave.name: channel.tracers[member, :, index] for index, wave in enumerate(CHANNEL_WAVES)
         }
-        file.write(time, {"x_velocity": u[member], "y_velocity": v[member], **tracers})
+        fields = {
+            "x_velocity": u[member],
+            "y_velocity": v[member],
+            "potential_vorticity": channel.vorticity[member],
+            "thickness": thickness[member],
+        }
+        file.write(time, {**fields, **tracers})
 
 
 def simulate_channel(
@@ -172,6 +200,7 @@ def simulate_channel(
         "regime": asdict(regime), "members": members, "snapshots": snapshots,
         "spacing_days": spacing_days, "spinup_days": spinup_days, "tracer_days": tracer_days,
         "seed": seed, "targets": [asdict(wave) for wave in CHANNEL_WAVES],
+        "active": [label.role for label in _active_labels(regime)],
     }  # fmt: skip
     if is_complete(target, record, members):
         report(regime.name, 1.0, "kept what is there")
