@@ -10,6 +10,7 @@ import numpy.typing as npt
 import xarray as xr
 
 from learnclosure import __version__
+from learnclosure.diagnosis.active_artefact import add_active
 from learnclosure.diagnosis.artefact import StatisticsBuilder
 from learnclosure.diagnosis.coarse import Coarsening
 from learnclosure.diagnosis.estimate import Estimator, GroupEstimate, WithheldSkill
@@ -83,8 +84,11 @@ def diagnose(
     _add_tensor(builder, estimator, whole, valid, error)
     _add_quality(builder, ensemble, estimator, whole, halves, valid)
     _add_skill(builder, skill)
+    report(0.97, "active side")
+    known = np.where(valid[..., None, None], whole.smooth.tensor, np.nan)
+    active = add_active(builder, ensemble, moments, estimator, known)
     report(1.0, "done")
-    return builder.build(_attributes(ensemble, chosen, inversion, skill))
+    return builder.build({**_attributes(ensemble, chosen, inversion, skill), **active})
 
 
 def _check_tracers(ensemble: EnsembleSource) -> None:
