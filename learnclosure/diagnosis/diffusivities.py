@@ -28,10 +28,10 @@ from learnclosure.ensemble.grid import Geometry, divergence
 FloatArray = npt.NDArray[np.float64]
 BoolArray = npt.NDArray[np.bool_]
 
-LONGEST = 4.0
+LONGEST = 1.0
 """Longest smoothing length tried, in sides of a square as large as the sea."""
 
-HALVINGS = 9
+HALVINGS = 7
 """Number of times the smoothing length is halved at most."""
 
 PATIENCE = 2
@@ -138,8 +138,13 @@ class _Fit:
         sum_right, sum_normal = float(self.right.sum()), float(self.normal.sum())
         return max(sum_right / sum_normal, 0.0) if sum_normal > 0.0 else 0.0
 
-    def smooth(self, length: float, *, raw_flux: bool = False) -> FloatArray:
-        """Fit a smooth diffusivity, shape (cell,), to the divergence or to the flux itself."""
+    def smooth(
+        self, length: float, near: FloatArray | None = None, *, raw_flux: bool = False
+    ) -> FloatArray:
+        """Fit a smooth diffusivity, shape (cell,), to the divergence or to the flux itself.
+
+        A fit ``near`` this one saves time and changes nothing else.
+        """
         normal, right = self.normal, self.right
         penalty = length**2 * self.mean_square * self.layer.roughness
         if raw_flux:
@@ -148,7 +153,8 @@ class _Fit:
             normal, right = diags_array(scale * self.square), scale * self.down
         size = float(normal.diagonal().mean())
         weak = diags_array(np.full(len(right), 1e-12 * size))
-        return minimise_nonnegative(csc_matrix(normal + penalty + weak), right)
+        start = None if near is None else near > 0.0
+        return minimise_nonnegative(csc_matrix(normal + penalty + weak), right, start)
 
     def skill(self, diffusivity: FloatArray | float) -> float:
         """Share of this group's divergence that a diffusivity explains."""
@@ -181,19 +187,24 @@ def _cross(fits: Sequence[_Fit], found: Sequence[FloatArray | float]) -> float:
     return 0.5 * (fits[1].skill(found[0]) + fits[0].skill(found[1]))
 
 
-def _best_length(layer: _Layer, halves: Sequence[_Fit]) -> tuple[float, float]:
-    """Smoothing length with the best cross-half score, and that score."""
+def _best_length(
+    layer: _Layer, halves: Sequence[_Fit]
+) -> tuple[float, float, list[FloatArray | None]]:
+    """Smoothing length with the best cross-half score, that score, and both fits."""
     best, length, since = -np.inf, np.nan, 0
+    found: list[FloatArray | None] = [None, None]
+    chosen = found
     for halving in range(HALVINGS + 1):
         tried = LONGEST * layer.side * 0.5**halving
-        score = _cross(halves, [half.smooth(tried) for half in halves])
+        fits = [half.smooth(tried, near) for half, near in zip(halves, found, strict=True)]
+        found = list(fits)
+        score = _cross(halves, fits)
+        since += 1
         if score > best:
-            best, length, since = score, tried, 0
-        else:
-            since += 1
+            best, length, chosen, since = score, tried, found, 0
         if since >= PATIENCE:
             break
-    return length, best
+    return length, best, chosen
 
 
 def smooth_diffusivity(
@@ -232,8 +243,8 @@ def smooth_diffusivity(
             continue
         layer = _Layer(geometry, area, number)
         fit, parts = _Fit(layer, whole), [_Fit(layer, half) for half in halves]
-        length, cross = _best_length(layer, parts)
-        values = fit.smooth(length)
+        length, cross, near = _best_length(layer, parts)
+        values = fit.smooth(length, near[0])
         raw = [one.smooth(length, raw_flux=True) for one in (fit, *parts)]
         field[number].reshape(-1)[layer.wet] = values
         rows[:, number] = (
