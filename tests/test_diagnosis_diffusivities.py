@@ -15,6 +15,7 @@ from learnclosure.diagnosis.diffusivities import (
     divergence_operator,
     smooth_diffusivity,
 )
+from learnclosure.diagnosis.knots import interpolation
 from learnclosure.diagnosis.nonnegative import minimise_nonnegative
 from learnclosure.ensemble.grid import divergence, gradient
 
@@ -176,3 +177,38 @@ def test_a_layer_without_any_gradient_has_no_diffusivity():
     found = smooth_diffusivity(grid.geometry, area, nothing, [nothing, nothing])
     assert np.isnan(found.diffusivity).all()
     assert np.isnan(found.skill).all()
+
+
+@pytest.mark.parametrize(("count", "factor"), [(12, 3), (13, 4), (7, 1), (5, 9)])
+def test_knots_reproduce_straight_lines_between_them_and_never_change_a_sign(count, factor):
+    for periodic in (False, True):
+        weights = interpolation(count, factor, periodic).toarray()
+        assert weights.shape == (count, -(-count // factor))
+        assert (weights >= 0.0).all()
+        np.testing.assert_allclose(weights.sum(axis=1), 1.0)
+    starts = np.arange(0, count, factor)
+    centres = starts + 0.5 * (np.minimum(factor, count - starts) - 1)
+    cells = np.arange(count)
+    between = (cells >= centres[0]) & (cells <= centres[-1])
+    straight = interpolation(count, factor, False) @ centres
+    np.testing.assert_allclose(straight[between], cells[between])
+
+
+def test_on_a_periodic_axis_knots_join_both_ends():
+    weights = interpolation(8, 2, True).toarray()
+    np.testing.assert_allclose(weights[0], [0.75, 0, 0, 0.25])
+    np.testing.assert_allclose(weights[7], [0.25, 0, 0, 0.75])
+
+
+def test_fewer_knots_than_cells_change_a_smooth_fit_little(monkeypatch):
+    grid = basin()
+    monkeypatch.setattr(diffusivities, "LONGEST", 0.25)
+    monkeypatch.setattr(diffusivities, "HALVINGS", 0)
+    few = fitted(grid, 0.2)
+    monkeypatch.setattr(diffusivities, "KNOTS_PER_LENGTH", 1e9)
+    all_cells = fitted(grid, 0.2)
+    assert few.length == all_cells.length
+    assert few.skill[0] == pytest.approx(all_cells.skill[0], abs=0.02)
+    wet = grid.geometry.mask
+    gap = np.sqrt(np.mean((few.diffusivity - all_cells.diffusivity)[wet] ** 2))
+    assert gap < 0.1 * np.std(all_cells.diffusivity[wet])

@@ -8,7 +8,8 @@ and a diffusivity fitted to it does not carry the divergence. In every layer the
 
 for the eddy flux J and the mean gradient g. The smoothing length l decides how much of the
 sampling noise is fitted: it is the one with which a fit to half of the members explains
-most of the divergence in the other half.
+most of the divergence in the other half. The diffusivity is bilinear between knots half
+of that length apart, or told cell by cell where cells are wider.
 """
 
 from __future__ import annotations
@@ -20,13 +21,12 @@ import numpy as np
 import numpy.typing as npt
 from scipy.sparse import coo_matrix, csc_matrix, csr_matrix, diags_array
 
-from learnclosure.diagnosis.inversion import smoothness_operator
+from learnclosure.diagnosis.knots import Knots, place_knots
 from learnclosure.diagnosis.nonnegative import minimise_nonnegative
 from learnclosure.diagnosis.skill import divergence_skill
 from learnclosure.ensemble.grid import Geometry, divergence
 
 FloatArray = npt.NDArray[np.float64]
-BoolArray = npt.NDArray[np.bool_]
 
 LONGEST = 1.0
 """Longest smoothing length tried, in sides of a square as large as the sea."""
@@ -34,7 +34,10 @@ LONGEST = 1.0
 HALVINGS = 7
 """Number of times the smoothing length is halved at most."""
 
-PATIENCE = 2
+KNOTS_PER_LENGTH = 2.0
+"""Knots in a smoothing length, where cells are that fine."""
+
+PATIENCE = 1
 """Halvings without gain after which no shorter length is tried."""
 
 
@@ -146,15 +149,20 @@ class _Fit:
         A fit ``near`` this one saves time and changes nothing else.
         """
         normal, right = self.normal, self.right
-        penalty = length**2 * self.mean_square * self.layer.roughness
+        knots = self.layer.knots(length)
+        penalty = length**2 * self.mean_square * knots.roughness
         if raw_flux:
             # Divided by the smoothing length both misfits keep the same scales.
             scale = self.layer.area / length**2
             normal, right = diags_array(scale * self.square), scale * self.down
-        size = float(normal.diagonal().mean())
-        weak = diags_array(np.full(len(right), 1e-12 * size))
-        start = None if near is None else near > 0.0
-        return minimise_nonnegative(csc_matrix(normal + penalty + weak), right, start)
+        reduced = knots.weights.T @ normal @ knots.weights
+        size = float(reduced.diagonal().mean())
+        weak = diags_array(np.full(knots.weights.shape[1], 1e-12 * size))
+        start = None if near is None else knots.weights.T @ near > 0.0
+        found = minimise_nonnegative(
+            csc_matrix(reduced + penalty + weak), knots.weights.T @ right, start
+        )
+        return np.asarray(knots.weights @ found)
 
     def skill(self, diffusivity: FloatArray | float) -> float:
         """Share of this group's divergence that a diffusivity explains."""
@@ -170,6 +178,7 @@ class _Layer:
     """Operators of one layer between its sea cells."""
 
     def __init__(self, geometry: Geometry, area: FloatArray, number: int) -> None:
+        self.geometry = geometry
         self.number = number
         self.wet = np.flatnonzero(geometry.mask[number] & (area[number] > 0.0))
         self.area = area[number].ravel()[self.wet]
@@ -178,8 +187,17 @@ class _Layer:
         self.along_x, self.along_y = (
             part[wet][:, wet] for part in divergence_operator(geometry, number)
         )
-        smooth = smoothness_operator(geometry, number)[wet][:, wet]
-        self.roughness = csc_matrix(smooth.T @ diags_array(1.0 / self.area) @ smooth)
+        self.width = float(np.sqrt(np.median(geometry.area.ravel()[wet])))
+        self._knots: dict[int, Knots] = {}
+
+    def knots(self, length: float) -> Knots:
+        """Knots close enough for a smoothing length."""
+        factor = max(1, int(length / (KNOTS_PER_LENGTH * self.width)))
+        if factor not in self._knots:
+            self._knots[factor] = place_knots(
+                self.geometry, self.number, self.wet, self.area, factor
+            )
+        return self._knots[factor]
 
 
 def _cross(fits: Sequence[_Fit], found: Sequence[FloatArray | float]) -> float:
