@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 
 from active_cases import accumulated, displaced, noisy_active, sloping_layers, sloping_levels
-from diagnosis_cases import GRADIENTS, box, uniform_eddies
+from diagnosis_cases import GRADIENTS, MemoryEnsemble, box, uniform_eddies
 from learnclosure.diagnosis.active import (
     CoefficientEstimator,
     carried_potential_vorticity,
@@ -160,8 +160,6 @@ def test_two_layer_fluxes_keep_the_exact_relations_of_quasi_geostrophy():
     # Taylor 1915, Phil. Trans. A 215, 1-26, and Bretherton 1966, Q. J. R. Meteorol. Soc. 92,
     # 325-334 (from memory): in the zonal mean <v q> = -d_y <u v> - (f/H) <v h>, and thickness
     # fluxes of both layers cancel.
-    from diagnosis_cases import MemoryEnsemble
-
     values, c = two_layer_members()
     grid = box(2, 32, 48, dx=20e3, dy=20e3, periodic=(True, True))
     ensemble = MemoryEnsemble(

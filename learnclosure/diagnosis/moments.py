@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Protocol
 
 import numpy as np
@@ -16,6 +16,8 @@ from learnclosure.errors import DiagnosisError
 
 FloatArray = npt.NDArray[np.float64]
 IndexArray = npt.NDArray[np.int64]
+
+VELOCITIES = ("x_velocity", "y_velocity")
 
 
 class EnsembleSource(Protocol):
@@ -59,7 +61,7 @@ class GroupMoments:
     mean: dict[str, FloatArray]
     flux: dict[str, FloatArray]
     eddy_kinetic_energy: FloatArray
-    covariance: dict[tuple[str, str], FloatArray]
+    covariance: dict[tuple[str, str], FloatArray] = field(default_factory=dict)
 
 
 def covariance_pairs(active: tuple[str, ...]) -> tuple[tuple[str, str], ...]:
@@ -255,7 +257,7 @@ def accumulate_moments(
                 known = member_mean.get(name)
                 member_mean[name] = coarse if known is None else known + coarse
         snapshot = _Snapshot(fields, coarsening, source.active)
-        energy = [snapshot.products(axis, axis) for axis in ("x_velocity", "y_velocity")]
+        energy = [snapshot.products(axis, axis) for axis in VELOCITIES]
         whole.add_energy(0.5 * (energy[0] + energy[1]).sum(axis=0))
         for half in halves:
             parts = [
@@ -263,8 +265,11 @@ def accumulate_moments(
                 for axis, products in zip(("x_velocity", "y_velocity"), energy, strict=True)
             ]
             half.add_energy(0.5 * (parts[0] + parts[1]))
+        squares = {(axis, axis): part for axis, part in zip(VELOCITIES, energy, strict=True)}
         for pair in covariance_pairs(source.active):
-            products = snapshot.products(*pair)
+            products = squares.get(pair)
+            if products is None:
+                products = snapshot.products(*pair)
             whole.add_covariance(pair, products.sum(axis=0))
             for half in halves:
                 half.add_covariance(pair, snapshot.group_sum(products, *pair, half.members))
