@@ -79,6 +79,12 @@ class VariableNames(Section):
         description="total fluxes along x and y by tracer, where the model averaged or summed "
         "them over its steps; velocities and tracers are then means over the same time",
     )
+    potential_vorticity: str | None = Field(
+        None, description="potential vorticity, for the active side of the diagnosis"
+    )
+    thickness: str | None = Field(
+        None, description="layer thickness at each time, m, for the active side of the diagnosis"
+    )
 
 
 class GridLayout(Section):
@@ -118,6 +124,12 @@ class GridLayout(Section):
     )
     latitude: str | float | None = Field(
         None, description="variable or value of the latitude, degrees north"
+    )
+    potential_vorticity_gradient: float | tuple[float, ...] | None = Field(
+        None, description="gradient along y that potential_vorticity leaves out, one or one a layer"
+    )
+    thickness_gradient: float | tuple[float, ...] | None = Field(
+        None, description="gradient along y that thickness leaves out, one or one a layer, m per m"
     )
     dx: str | float | None = Field(None, description="variable or value of the cell width, m")
     dy: str | float | None = Field(None, description="variable or value of the cell width, m")

@@ -10,6 +10,7 @@ import numpy.typing as npt
 import xarray as xr
 
 from learnclosure import __version__
+from learnclosure.diagnosis.active_artefact import add_active
 from learnclosure.diagnosis.artefact import StatisticsBuilder
 from learnclosure.diagnosis.ceiling_artefact import add_ceilings
 from learnclosure.diagnosis.ceilings import estimate_ceilings
@@ -109,8 +110,12 @@ def diagnose(
                 draws=chosen.ceiling_draws,
             ),
         )  # fmt: skip
+    report(0.97, "active side")
+    known = np.where(valid[..., None, None], whole.smooth.tensor, np.nan)
+    active = add_active(builder, ensemble, moments, estimator, known)
     report(1.0, "done")
-    statistics = builder.build(_attributes(ensemble, chosen, estimator.inversion, skill))
+    attributes = _attributes(ensemble, chosen, estimator.inversion, skill)
+    statistics = builder.build({**attributes, **active})
     return statistics.assign_attrs(cautions="; ".join(cautions(statistics)))
 
 

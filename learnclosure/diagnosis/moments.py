@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Protocol
 
 import numpy as np
@@ -19,6 +19,7 @@ IndexArray = npt.NDArray[np.int64]
 
 TIME_BLOCKS = 4
 """Consecutive blocks of time whose moments are kept apart, to see what more times give."""
+VELOCITIES = ("x_velocity", "y_velocity")
 
 
 class EnsembleSource(Protocol):
@@ -33,6 +34,8 @@ class EnsembleSource(Protocol):
     withheld_tracers: tuple[str, ...]
     units: dict[str, str]
     has_buoyancy: bool
+    active: tuple[str, ...]
+    left_out_gradients: dict[str, FloatArray]
     assumptions: tuple[str, ...]
 
     def fields(self, time: int) -> dict[str, FloatArray]:
@@ -49,14 +52,39 @@ class GroupMoments:
     mean : dict of str to ndarray, shape (layer, y, x)
         Ensemble and time means of velocities, tracers and buoyancy.
     flux : dict of str to ndarray, shape (2, layer, y, x)
-        Time mean of the unbiased (N - 1) covariance of velocity and each tracer.
+        Time mean of the unbiased (N - 1) covariance of velocity and each tracer or active
+        field.
     eddy_kinetic_energy : ndarray, shape (layer, y, x), m2 s-2
         From unbiased variances.
+    covariance : dict of pair of str to ndarray, shape (layer, y, x)
+        Time mean of the unbiased covariances `covariance_pairs` asks for.
     """
 
     mean: dict[str, FloatArray]
     flux: dict[str, FloatArray]
     eddy_kinetic_energy: FloatArray
+    covariance: dict[tuple[str, str], FloatArray] = field(default_factory=dict)
+
+
+def covariance_pairs(active: tuple[str, ...]) -> tuple[tuple[str, str], ...]:
+    """Pairs of fields whose covariance the energetics of the active side need.
+
+    Parameters
+    ----------
+    active : tuple of str
+        Active fields.
+
+    Returns
+    -------
+    tuple of pair of str
+        Momentum fluxes and the variance of each active field; none without active fields.
+    """
+    if not active:
+        return ()
+    momentum = (
+        ("x_velocity", "x_velocity"), ("x_velocity", "y_velocity"), ("y_velocity", "y_velocity"),
+    )  # fmt: skip
+    return (*momentum, *((name, name) for name in active))
 
 
 @dataclass(frozen=True)
@@ -109,7 +137,7 @@ class Moments:
             name: unbias * product[members].mean(axis=0)
             for name, product in self.member_product.items()
         }
-        return mean, flux
+        return mean, _with_windows(flux, mean)
 
     def without_member(self, member: int) -> tuple[dict[str, FloatArray], dict[str, FloatArray]]:
         """Tracer means and eddy fluxes of the ensemble without one member.
@@ -131,9 +159,21 @@ class Moments:
             count = len(product)
             rest = product.sum(axis=0) - count / (count - 1) * product[member]
             flux[tracer] = rest / (count - 2)
-            values = self.member_mean[tracer]
-            mean[tracer] = (values.sum(axis=0) - values[member]) / (count - 1)
-        return mean, flux
+        for name, values in self.member_mean.items():
+            mean[name] = (values.sum(axis=0) - values[member]) / (len(values) - 1)
+        return mean, _with_windows(flux, mean)
+
+
+def _with_windows(
+    flux: dict[str, FloatArray], mean: dict[str, FloatArray]
+) -> dict[str, FloatArray]:
+    """Add to covariances the mean eddy fluxes within the windows of the files."""
+    return {
+        name: covariance + np.stack([mean[f"{name}_within_{axis}"] for axis in "xy"])
+        if f"{name}_within_x" in mean
+        else covariance
+        for name, covariance in flux.items()
+    }
 
 
 class _Group:
@@ -144,6 +184,7 @@ class _Group:
         self.mean: dict[str, FloatArray] = {}
         self.flux: dict[str, FloatArray] = {}
         self.energy: FloatArray | None = None
+        self.covariance: dict[tuple[str, str], FloatArray] = {}
 
     def add_mean(self, name: str, coarse: FloatArray) -> None:
         value = coarse[self.members].mean(axis=0)
@@ -165,28 +206,40 @@ class _Group:
             for own, other in ((total.mean, part.mean), (total.flux, part.flux)):
                 for name, value in other.items():
                     own[name] = own[name] + value if name in own else value
+            for pair, value in part.covariance.items():
+                known = total.covariance.get(pair)
+                total.covariance[pair] = value if known is None else known + value
             if part.energy is not None:
                 total.energy = part.energy if total.energy is None else total.energy + part.energy
         return total
 
+    def add_covariance(self, pair: tuple[str, str], summed: FloatArray) -> None:
+        value = summed / (len(self.members) - 1)
+        self.covariance[pair] = self.covariance[pair] + value if pair in self.covariance else value
+
     def finish(self, times: int) -> GroupMoments:
         assert self.energy is not None
+        mean = {name: total / times for name, total in self.mean.items()}
+        covariance = {name: total / times for name, total in self.flux.items()}
         return GroupMoments(
-            mean={name: total / times for name, total in self.mean.items()},
-            flux={name: total / times for name, total in self.flux.items()},
+            mean=mean,
+            flux=_with_windows(covariance, mean),
             eddy_kinetic_energy=self.energy / times,
+            covariance={pair: total / times for pair, total in self.covariance.items()},
         )
 
 
 class _Snapshot:
     """Departures of one time and the coarse sums of their products over groups."""
 
-    def __init__(self, fields: dict[str, FloatArray], coarsening: Coarsening) -> None:
+    def __init__(
+        self, fields: dict[str, FloatArray], coarsening: Coarsening, active: tuple[str, ...]
+    ) -> None:
         self.coarsening = coarsening
         self.departure = {
             name: values - values.mean(axis=0)
             for name, values in fields.items()
-            if name != "buoyancy"
+            if (name != "buoyancy" or name in active) and "_within_" not in name
         }
 
     def products(self, first: str, second: str) -> FloatArray:
@@ -254,7 +307,7 @@ def accumulate_moments(
     block_of = np.arange(times) * len(blocks) // times
     if count >= LEAST_MEMBERS_FOR_HALVES:
         blocks = [[_Group(everyone[0::2]), _Group(everyone[1::2])] for _ in blocks]
-    names = (*source.tracers, *source.withheld_tracers)
+    names = (*source.tracers, *source.withheld_tracers, *source.active)
     member_mean: dict[str, FloatArray] = {}
     member_product: dict[str, FloatArray] = {}
     for time in range(times):
@@ -264,11 +317,11 @@ def accumulate_moments(
             coarse = coarsening.mean(values)
             for group in (whole, *halves):
                 group.add_mean(name, coarse)
-            if name in names:
+            if name in names or "_within_" in name:
                 known = member_mean.get(name)
                 member_mean[name] = coarse if known is None else known + coarse
-        snapshot = _Snapshot(fields, coarsening)
-        energy = [snapshot.products(axis, axis) for axis in ("x_velocity", "y_velocity")]
+        snapshot = _Snapshot(fields, coarsening, source.active)
+        energy = [snapshot.products(axis, axis) for axis in VELOCITIES]
         whole.add_energy(0.5 * (energy[0] + energy[1]).sum(axis=0))
         for half in halves:
             parts = [
@@ -276,6 +329,14 @@ def accumulate_moments(
                 for axis, products in zip(("x_velocity", "y_velocity"), energy, strict=True)
             ]
             half.add_energy(0.5 * (parts[0] + parts[1]))
+        squares = {(axis, axis): part for axis, part in zip(VELOCITIES, energy, strict=True)}
+        for pair in covariance_pairs(source.active):
+            products = squares.get(pair)
+            if products is None:
+                products = snapshot.products(*pair)
+            whole.add_covariance(pair, products.sum(axis=0))
+            for half in halves:
+                half.add_covariance(pair, snapshot.group_sum(products, *pair, half.members))
         for name in names:
             pairs = [snapshot.products(axis, name) for axis in ("x_velocity", "y_velocity")]
             both = np.stack(pairs, axis=1)

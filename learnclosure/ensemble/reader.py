@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from contextlib import ExitStack
+from dataclasses import replace
 from functools import cached_property
 from pathlib import Path
 from types import TracebackType
@@ -12,6 +13,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
+from learnclosure.ensemble.active import check_thickness, interface_height, left_out_gradients
 from learnclosure.ensemble.agreement import check_grids_alike, check_members_alike
 from learnclosure.ensemble.assembly import build_grid
 from learnclosure.ensemble.axes import (
@@ -65,6 +67,11 @@ class Ensemble:
     units_before : dict of str to str
         Units in the files.
     has_buoyancy : bool
+    active : tuple of str
+        Fields that act on the flow: of layers ``potential_vorticity``, ``thickness`` and
+        ``interface_height``, of levels ``potential_vorticity`` and ``buoyancy``.
+    left_out_gradients : dict of str to ndarray, shape (2, layer), SI units per metre
+        Uniform gradients that active fields leave out.
     assumptions : tuple of str
         What was assumed where neither files nor study say.
     """
@@ -110,7 +117,24 @@ class Ensemble:
         known = str(first.dataset[name].attrs.get("standard_name", "")) if name else ""
         self._buoyancy_rule = buoyancy_rule(table, self.roles, self.grid, known, notes)
         self.has_buoyancy = self.roles.buoyancy is not None or self._buoyancy_rule is not None
+        self._find_active(table, first, notes)
         self.assumptions = tuple(dict.fromkeys(notes))
+
+    def _find_active(self, table: EnsembleTable, first: Member, notes: list[str]) -> None:
+        names = dict(self.roles.active)
+        if self.grid.vertical == "levels" and names.pop("thickness", None) is not None:
+            self.roles = replace(self.roles, thickness=None)
+            notes.append("the thickness of levels that stand still takes no part in eddy fluxes")
+        factors = {part: self._conversions.active[part].factor for part in names}
+        shape = (self.grid.shape[0], self._top_last)
+        self.left_out_gradients = left_out_gradients(
+            table, first.dataset, names, factors, shape, notes
+        )
+        self._active_names = names
+        derived = ("interface_height",) if "thickness" in names and shape[0] > 1 else ()
+        levels = self.has_buoyancy and self.grid.vertical == "levels"
+        self.active = (*names, *derived, *(("buoyancy",) if levels else ()))
+        self.units |= {"interface_height": "m", "buoyancy": "m s-2"}
 
     def __enter__(self) -> Ensemble:
         return self
@@ -144,15 +168,15 @@ class Ensemble:
         -------
         dict of str to ndarray, shape (member, layer, y, x)
             ``x_velocity`` and ``y_velocity`` at cell centres in m s-1, every tracer under
-            its own name, and ``buoyancy`` in m s-2 if the ensemble has it; the top layer
-            first, zero on land. Where the files hold total fluxes of a tracer, also
-            ``<tracer>_within_x`` and ``_within_y``, its eddy flux within the window each
-            time stands for.
+            its own name, ``buoyancy`` in m s-2 if the ensemble has it and every other
+            active field; the top layer first, zero on land. Where the files hold total
+            fluxes of a tracer, also ``<tracer>_within_x`` and ``_within_y``, its eddy flux
+            within the window each time stands for.
 
         Raises
         ------
         SourceError
-            If a value in the sea is missing or a file cannot be read.
+            If a value in the sea is missing, a layer vanishes or a file cannot be read.
         """
         found: dict[str, list[FloatArray]] = {}
         for member in self.members:
@@ -199,6 +223,22 @@ class Ensemble:
             else:
                 values = self._buoyancy_rule(parts["temperature"], parts.get("salinity"))
                 result["buoyancy"] = np.where(mask, values, 0.0)
+        return result | self._active_fields(member, raw, time)
+
+    def _active_fields(
+        self, member: Member, raw: dict[str, FloatArray], time: int
+    ) -> dict[str, FloatArray]:
+        mask = self.grid.geometry.mask
+        result = {
+            part: np.where(mask, self._conversions.active[part](raw[name]), 0.0)
+            for part, name in self._active_names.items()
+        }
+        if "thickness" in result:
+            where = member.where(self._active_names["thickness"])
+            check_thickness(result["thickness"], mask, where, time)
+        if "interface_height" in self.active:
+            height = interface_height(result["thickness"], self.grid.sea_floor_depth)
+            result["interface_height"] = np.where(mask, height, 0.0)
         return result
 
     def _face(self, part: str) -> str | None:

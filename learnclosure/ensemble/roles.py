@@ -7,6 +7,7 @@ from dataclasses import dataclass, field
 
 import xarray as xr
 
+from learnclosure.ensemble.active import find_active
 from learnclosure.errors import DiagnosisError, RoleError
 from learnclosure.study import EnsembleTable
 
@@ -41,6 +42,8 @@ class Roles:
         For the stratification, where it is not fixed in time.
     total_fluxes : mapping of str to tuple of str
         Total fluxes along x and y by tracer, where the model summed them over its steps.
+    potential_vorticity, thickness : str or None
+        For the active side of the diagnosis.
     """
 
     x_velocity: str
@@ -51,6 +54,14 @@ class Roles:
     temperature: str | None
     salinity: str | None
     total_fluxes: Mapping[str, tuple[str, str]] = field(default_factory=dict)
+    potential_vorticity: str | None = None
+    thickness: str | None = None
+
+    @property
+    def active(self) -> dict[str, str]:
+        """Variables that act on the flow, by part; buoyancy is among the stratifying ones."""
+        parts = {"potential_vorticity": self.potential_vorticity, "thickness": self.thickness}
+        return {part: name for part, name in parts.items() if name is not None}
 
     @property
     def stratifying(self) -> dict[str, str]:
@@ -63,7 +74,12 @@ class Roles:
     @property
     def scalars(self) -> tuple[str, ...]:
         """All fields at cell centres, each once, tracers first."""
-        names = (*self.tracers, *self.withheld_tracers, *self.stratifying.values())
+        names = (
+            *self.tracers,
+            *self.withheld_tracers,
+            *self.stratifying.values(),
+            *self.active.values(),
+        )
         return tuple(dict.fromkeys(names))
 
     @property
@@ -186,7 +202,7 @@ def find_roles(table: EnsembleTable, dataset: xr.Dataset, where: object) -> Role
             expected=f"two or more of {_listed(others)}",
             remedy="name them under [ensemble.variables] tracers",
         )
-    optional = {}
+    optional = find_active(table, dataset, (*tracers, *withheld), where)
     for part in ("buoyancy", "temperature", "salinity"):
         named = getattr(names, part)
         if named is not None:
