@@ -53,12 +53,13 @@ def _sources_mark(study: Study, table: EnsembleTable) -> list[list[str | int]]:
 def _diagnose_region(study: Study, table: EnsembleTable) -> None:
     from learnclosure.diagnosis.artefact import write_statistics
     from learnclosure.diagnosis.diagnose import diagnose
+    from learnclosure.ensemble.averaging import averaged
     from learnclosure.ensemble.reader import open_ensemble
     from learnclosure.features.artefact import write_features
 
     places = artefacts(study)
     with open_ensemble(table, study.folder) as ensemble:
-        statistics = diagnose(ensemble, study.diagnosis)
+        statistics = diagnose(averaged(ensemble, study.diagnosis), study.diagnosis)
     write_statistics(statistics, places.statistics(table.name))
     write_features(statistics, places.features(table.name))
 

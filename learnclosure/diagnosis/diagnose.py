@@ -302,6 +302,7 @@ def _attributes(
     geometry = inversion.geometry
     axes = [axis for axis in "xy" if getattr(geometry, f"periodic_{axis}")]
     cell = "layer" if ensemble.grid.vertical == "layers" else "level"
+    average = "thickness-weighted" if getattr(ensemble, "weighted", False) else "Reynolds"
     attributes: dict[str, Any] = {
         "Conventions": "CF-1.11",
         "title": f"eddy statistics and transport tensor of the region {ensemble.name}",
@@ -310,7 +311,7 @@ def _attributes(
         "region": ensemble.name,
         "split": ensemble.split,
         "eddy_definition": (
-            f"departure from the ensemble mean of the same time; Reynolds average in each {cell}"
+            f"departure from the ensemble mean of the same time; {average} average in each {cell}"
         ),
         "members": np.int32(len(ensemble.member_labels)),
         "snapshots": np.int32(len(ensemble.times)),
@@ -325,6 +326,7 @@ def _attributes(
         "floor_method": settings.floor_method,
         "scalar_pull": inversion.pull,
         "assumptions": "; ".join(ensemble.assumptions),
+        **getattr(ensemble, "attributes", {}),
     }
     if skill is not None:
         attributes["withheld_method"] = (
