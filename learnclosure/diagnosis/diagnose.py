@@ -12,6 +12,7 @@ import xarray as xr
 from learnclosure import __version__
 from learnclosure.diagnosis.artefact import StatisticsBuilder
 from learnclosure.diagnosis.coarse import Coarsening
+from learnclosure.diagnosis.depth_axes import add_depth_axes
 from learnclosure.diagnosis.estimate import Estimator, GroupEstimate, WithheldSkill
 from learnclosure.diagnosis.inversion import SmoothInversion
 from learnclosure.diagnosis.moments import EnsembleSource, Moments, accumulate_moments
@@ -83,6 +84,7 @@ def diagnose(
     _add_tensor(builder, estimator, whole, valid, error)
     _add_quality(builder, ensemble, estimator, whole, halves, valid)
     _add_skill(builder, skill)
+    add_depth_axes(builder, ensemble, coarsening, moments.whole, whole.gradient, chosen)
     report(1.0, "done")
     return builder.build(_attributes(ensemble, chosen, inversion, skill))
 
@@ -157,6 +159,9 @@ def _add_mean_state(
     }
     for name, values in fields.items():
         builder.add_named(name, np.ascontiguousarray(values))
+    share = getattr(ensemble, "valid_share", None)
+    if share is not None:
+        builder.add_named("valid_share", coarsening.mean(share))
     if moments.halves:
         builder.add_named(
             "eddy_kinetic_energy",
