@@ -144,12 +144,12 @@ def layer_quantity(source: LevelSource, settings: LayerSettings) -> LayerQuantit
     return _variable(source, name)
 
 
-def _stratifying(source: LevelSource, part: str) -> Ensemble:
-    """Return the ensemble if it reads a temperature or the like."""
-    if isinstance(source, Ensemble) and part in source.roles.stratifying:
+def _with_temperature(source: LevelSource, wanted: str) -> Ensemble:
+    """Return the ensemble if it reads a temperature."""
+    if isinstance(source, Ensemble) and "temperature" in source.roles.stratifying:
         return source
     raise RoleError(
-        f"layers of {part if part == 'temperature' else 'potential density'} need a temperature",
+        f"layers of {wanted} need a temperature",
         where=f"region '{source.name}': {KEY} quantity",
         expected="'temperature' under [ensemble.variables] and [ensemble.seawater]",
         remedy="name it, or choose another quantity such as 'buoyancy'",
@@ -157,7 +157,7 @@ def _stratifying(source: LevelSource, part: str) -> Ensemble:
 
 
 def _potential_density(source: LevelSource, settings: LayerSettings) -> LayerQuantity:
-    ensemble = _stratifying(source, "temperature")
+    ensemble = _with_temperature(source, "potential density")
     equation = ensemble.equation
     assert equation is not None, "a temperature comes with an equation of state"
     pressure = reference_pressure(settings.reference_pressure)
@@ -172,7 +172,7 @@ def _potential_density(source: LevelSource, settings: LayerSettings) -> LayerQua
 
 
 def _temperature(source: LevelSource) -> LayerQuantity:
-    ensemble = _stratifying(source, "temperature")
+    ensemble = _with_temperature(source, "temperature")
     notes = (f"layers by the temperature '{ensemble.roles.temperature}' as the files hold it",)
     return LayerQuantity(
         "temperature", "K", lambda time: ensemble.stratifying(time)["temperature"], False, notes
