@@ -143,7 +143,7 @@ class LayerSettings(Section):
         None, ge=2, le=200, description="number of layers of equal volume, in place of edges"
     )
     reconstruction: Literal["linear", "constant"] = Field(
-        "linear", description="the quantity between and within levels"
+        "linear", description="profiles between and within levels"
     )
     least_thickness: float = Field(
         1.0, gt=0, description="least mean thickness of a layer in a cell that counts as sea, m"

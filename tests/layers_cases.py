@@ -53,11 +53,21 @@ def sampled_layers(fields, quantity, thickness, edges, *, linear, samples=4000):
         share = (np.arange(samples) + 0.5) / samples
         depth = centre[place] + (share - 0.5) * thickness[level]
         value = np.full(samples, quantity[level])
+        change = np.zeros(len(fields))
         if linear:
             value = np.interp(depth, centre, quantity[wet])
-        for layer in np.searchsorted(edges, value, side="right"):
+            if 0 < place < len(wet) - 1:
+                faces = [
+                    [np.interp(edge, centre, field[wet]) for field in fields]
+                    for edge in (floor[place - 1], floor[place])
+                ]
+                above, below = fields[:, level] - faces[0], faces[1] - fields[:, level]
+                least = np.minimum(np.abs(above), np.abs(below))
+                change = np.where(above * below > 0.0, 2.0 * np.sign(above) * least, 0.0)
+        layers = np.searchsorted(edges, value, side="right")
+        for layer, part in zip(layers, share - 0.5, strict=True):
             found[layer] += thickness[level] / samples
-            content[:, layer] += fields[:, level] * thickness[level] / samples
+            content[:, layer] += (fields[:, level] + change * part) * thickness[level] / samples
     return content, found
 
 

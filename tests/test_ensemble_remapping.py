@@ -72,6 +72,19 @@ def test_interfaces_of_a_linear_profile_lie_where_they_should():
     np.testing.assert_allclose(found.ravel(), [30.0, 60.0, 30.0, 80.0], rtol=1e-10)
 
 
+def test_a_tracer_bound_to_the_quantity_is_the_same_in_every_heaved_column():
+    # Water moves up and down, layers with it: between the ends their means do not change.
+    thickness = np.full((40, 1, 9), 25.0)
+    depth = 12.5 + 25.0 * np.arange(40.0)[:, None, None]
+    quantity = 1020.0 + 0.01 * (depth + 60.0 * np.sin(np.arange(9.0)))
+    edges = np.array([1022.0, 1023.1, 1025.3, 1027.9])
+    means, found = to_layers(3.0 * quantity[None], quantity, thickness, edges)
+    inner = means[0, 1:-1, 0]
+    np.testing.assert_allclose(inner, inner[:, :1] * np.ones(9), rtol=1e-12)
+    np.testing.assert_allclose(inner[:, 0], 1.5 * (edges[1:] + edges[:-1]), rtol=1e-12)
+    np.testing.assert_allclose(found[1:-1, 0], 100.0 * np.diff(edges)[:, None] * np.ones(9))
+
+
 def test_constant_reconstruction_gives_whole_cells_to_layers():
     thickness, quantity = column(10.0, 20.0, 30.0), column(1.0, 2.0, 3.0)
     means, found = to_layers(quantity[None], quantity, thickness, np.array([2.0]), linear=False)

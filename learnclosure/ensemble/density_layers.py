@@ -99,7 +99,7 @@ class DensityLayers:
         self.name, self.split = source.name, source.split
         self.member_labels, self.times = source.member_labels, source.times
         self.tracers, self.withheld_tracers = source.tracers, source.withheld_tracers
-        self.active: tuple[str, ...] = ()
+        self.active = tuple(dict.fromkeys((*getattr(source, "active", ()), "thickness")))
         self._quantity = layer_quantity(source, settings)
         # All that follows lets the quantity grow downward.
         self._sign = 1.0 if self._grows_downward() else -1.0
@@ -124,7 +124,7 @@ class DensityLayers:
     def attributes(self) -> dict[str, Any]:
         """What an artefact records of the layers."""
         return {
-            "layer_quantity": f"{self._quantity.name} in {self._quantity.units}",
+            "layer_quantity": f"{self._quantity.notes[0]}, in {self._quantity.units}",
             "layer_edges": self.edges,
             "layer_reconstruction": self._settings.reconstruction,
             "layer_inverted_columns_share": self._inverted,
