@@ -112,19 +112,31 @@ def demo(folder: Path, workers: int) -> None:
 @click.option("--region", "regions", multiple=True, help="Channel regions; all if not given.")
 @click.option("--members", type=click.IntRange(2, 10_000), default=12, show_default=True)
 @click.option("--snapshots", type=click.IntRange(1, 100_000), default=40, show_default=True)
+@click.option(
+    "--spacing",
+    type=click.FloatRange(0, min_open=True),
+    default=5.0,
+    show_default=True,
+    help="Days between snapshots of the channel.",
+)
+@click.option(
+    "--fluxes",
+    is_flag=True,
+    help="Means between snapshots, with tracer fluxes through faces summed over every step.",
+)
 @click.option("--seed", type=click.IntRange(0), default=0, show_default=True)
 @WORKERS
 def simulate(
-    folder: Path, kind: str, regions: tuple[str, ...], members: int, snapshots: int, seed: int,
-    workers: int,
+    folder: Path, kind: str, regions: tuple[str, ...], members: int, snapshots: int,
+    spacing: float, fluxes: bool, seed: int, workers: int,
 ) -> None:  # fmt: skip
     """Write built-in ensembles as NetCDF, one file a member, into FOLDER."""
     from learnclosure.demonstration import simulate_kind
 
     with progress_bars() as progress:
         written = simulate_kind(
-            folder, kind, regions=regions, members=members, snapshots=snapshots, seed=seed,
-            workers=workers, progress=progress,
+            folder, kind, regions=regions, members=members, snapshots=snapshots,
+            spacing_days=spacing, fluxes=fluxes, seed=seed, workers=workers, progress=progress,
         )  # fmt: skip
     for path in written:
         console.print(str(path), markup=False, soft_wrap=True)

@@ -62,6 +62,8 @@ def simulate_kind(
     regions: Sequence[str] = (),
     members: int = 12,
     snapshots: int = 40,
+    spacing_days: float = 5.0,
+    fluxes: bool = False,
     seed: int = 0,
     workers: int = 2,
     progress: Progress = silent,
@@ -76,6 +78,10 @@ def simulate_kind(
     regions : sequence of str, optional
         Channel regions; all if empty.
     members, snapshots, seed : int, optional
+    spacing_days : float, optional, days
+        Between snapshots of the channel.
+    fluxes : bool, optional
+        Whether the channel's files hold means and total tracer fluxes between snapshots.
     workers : int, optional
         Channel regions simulated at once.
     progress : callable, optional
@@ -102,9 +108,17 @@ def simulate_kind(
             folder,
             members=members,
             snapshots=snapshots,
+            spacing_days=spacing_days,
+            fluxes=fluxes,
             seed=seed,
             workers=workers,
             progress=lambda name, share, note: progress(f"simulate {name}", share, note),
+        )
+    if fluxes:
+        raise InputError(
+            f"a {kind} ensemble has no fluxes summed over its steps",
+            where="--fluxes",
+            remedy="leave the option out",
         )
     if regions:
         raise InputError(

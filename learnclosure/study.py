@@ -19,6 +19,11 @@ Face = Literal["center", "east", "west", "north", "south", "top", "bottom"]
 Family = Literal["mean-field", "local-energy"]
 Regressor = Literal["ridge", "extra-trees", "histogram-boosting", "mlp", "trees-and-mlp"]
 Target = Literal["linear", "log-cholesky"]
+GaugeBoundary = Literal["no-flux", "zero-potential", "least-flux"]
+
+
+RADIUS_OVER_SMOOTHING = 1.5
+"""The tensor is kept smooth over two thirds of what eddies blur gradients over."""
 
 
 class Section(BaseModel):
@@ -42,6 +47,11 @@ class VariableNames(Section):
     buoyancy: str | None = Field(None, description="buoyancy")
     temperature: str | None = Field(None, description="temperature, for the stratification")
     salinity: str | None = Field(None, description="salinity, for the stratification")
+    total_fluxes: dict[str, tuple[str, str]] = Field(
+        default_factory=dict,
+        description="total fluxes along x and y by tracer, where the model averaged or summed "
+        "them over its steps; velocities and tracers are then means over the same time",
+    )
 
 
 class GridLayout(Section):
@@ -53,9 +63,12 @@ class GridLayout(Section):
     time: str | None = Field(None, description="time dimension")
     member: str | None = Field(None, description="member dimension, if members share a file")
     periodic: tuple[Literal["x", "y"], ...] | None = Field(None, description="periodic axes")
-    faces: dict[Literal["x_velocity", "y_velocity", "z_velocity"], Face] = Field(
+    faces: dict[
+        Literal["x_velocity", "y_velocity", "z_velocity", "total_flux_x", "total_flux_y"], Face
+    ] = Field(
         default_factory=dict,
-        description="face of the cell on which a velocity sits; cell centre if not named",
+        description="face of the cell on which a velocity or total flux sits; the centre if "
+        "not named, and for fluxes where the velocity sits",
     )
     vertical: Literal["layers", "levels"] | None = Field(
         None, description="whether vertical cells move with the fluid or stand still"
@@ -176,7 +189,7 @@ class DiagnosisSettings(Section):
     )
     coarsen: int = Field(2, ge=1, le=64, description="cells per coarse cell along x and y")
     smoothing_length: float = Field(
-        16.0e3, ge=0, description="length over which the tensor is kept smooth, m"
+        24.0e3, ge=0, description="length over which the tensor is kept smooth, m"
     )
     floor: float = Field(50.0, ge=0, description="lowest eigenvalue of the symmetric part, m2 s-1")
     floor_method: Literal["admm", "projection"] = Field(
@@ -185,6 +198,50 @@ class DiagnosisSettings(Section):
     scalar_pull: float | None = Field(
         None, ge=0, description="pull to the local scalar fit; by default only for few tracers"
     )
+    flux: Literal["full", "divergent"] = Field(
+        "full", description="invert the eddy fluxes or only their divergent parts"
+    )
+    rotational_weight: float = Field(
+        0.0, ge=0, le=1, description="flux = 'divergent': share of the rotational part that stays"
+    )
+    gauge_boundary: GaugeBoundary = Field(
+        "no-flux", description="what the divergent part of a flux holds at coasts"
+    )
+    relaxation_time: float | None = Field(
+        None, gt=0, description="time in which anomalies of the tracers are relaxed away, s"
+    )
+    solver: Literal["auto", "direct", "iterative"] = Field(
+        "auto", description="factorise the layers' systems or iterate; by size if auto"
+    )
+    form: Literal["local", "memory"] = Field(
+        "local",
+        description="fluxes from the mean gradient of the place, or (emerging) of where the "
+        "water came from",
+    )
+    memory_time: float = Field(
+        259_200.0, ge=0, description="memory form: time the flow remembers a gradient, s"
+    )
+    memory_length: float | None = Field(
+        None,
+        ge=0,
+        description="memory form: length eddies blur a gradient over, m; by "
+        "default 1.5 smoothing lengths, about a deformation radius",
+    )
+    leverage_tracers: tuple[str, ...] | None = Field(
+        None, description="tracers whose leverage is wanted; by default the withheld ones"
+    )
+
+    @property
+    def blurring_length(self) -> float:
+        """Length of the memory form, m."""
+        if self.memory_length is not None:
+            return self.memory_length
+        return RADIUS_OVER_SMOOTHING * self.smoothing_length
+
+    @property
+    def kept_rotational_weight(self) -> float:
+        """Share of the rotational part of fluxes that is inverted."""
+        return 1.0 if self.flux == "full" else self.rotational_weight
 
 
 class FeatureSettings(Section):

@@ -70,3 +70,10 @@ def test_regions_that_cannot_be_told_apart_or_used_are_refused() -> None:
     region["valid"][:] = 0
     with pytest.raises(TrainingError, match="amber: no cell has a determined transport tensor"):
         table_from_statistics([region])
+
+
+def test_a_tensor_that_acts_on_remembered_gradients_is_not_trained_on() -> None:
+    region = with_known_law(mean_state("amber", 0.3, 50e3, 100.0), "mean-field")
+    region.attrs["tensor_form"] = "memory"
+    with pytest.raises(TrainingError, match="amber: its tensor acts on remembered gradients"):
+        table_from_statistics([region])

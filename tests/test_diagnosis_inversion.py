@@ -8,7 +8,8 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from diagnosis_cases import box
-from learnclosure.diagnosis.inversion import SmoothInversion, smoothness_operator
+from learnclosure.diagnosis.inversion import SmoothInversion
+from learnclosure.diagnosis.systems import smoothness_operator
 from learnclosure.diagnosis.tensor import (
     NormalEquations,
     least_squares_tensor,

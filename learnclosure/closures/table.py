@@ -141,6 +141,14 @@ class Table:
 def _region_table(dataset: xr.Dataset) -> Table:
     arrays = {str(name): np.asarray(dataset[name].values) for name in dataset.variables}
     name = str(dataset.attrs["region"])
+    if dataset.attrs.get("tensor_form", "local") != "local":
+        raise TrainingError(
+            "its tensor acts on remembered gradients, which a host does not have",
+            where=name,
+            found=f"form = '{dataset.attrs['tensor_form']}'",
+            expected="form = 'local'",
+            remedy="set [diagnosis] form = 'local' to train",
+        )
     state = MeanState.from_mapping(arrays, dict(dataset.attrs))
     fields = compute_inputs(state)
     components = np.stack([arrays[c].astype(np.float64) for c in TENSOR_COMPONENTS], axis=-1)
@@ -189,7 +197,8 @@ def table_from_statistics(datasets: Sequence[xr.Dataset]) -> Table:
     Raises
     ------
     TrainingError
-        If there is no region, two share a name, or one has no valid point.
+        If there is no region, two share a name, one has no valid point, or a tensor is
+        not in its local form.
     """
     tables = [_region_table(dataset) for dataset in datasets]
     if not tables:

@@ -13,9 +13,18 @@ from learnclosure import __version__
 from learnclosure.diagnosis.artefact import StatisticsBuilder
 from learnclosure.diagnosis.coarse import Coarsening
 from learnclosure.diagnosis.depth_axes import add_depth_axes
-from learnclosure.diagnosis.estimate import Estimator, GroupEstimate, WithheldSkill
+from learnclosure.diagnosis.estimate import Estimator, Form, GroupEstimate, WithheldSkill
+from learnclosure.diagnosis.gauge import HelmholtzSolver, rotational_share
 from learnclosure.diagnosis.inversion import SmoothInversion
+from learnclosure.diagnosis.memory import MemoryGradient
 from learnclosure.diagnosis.moments import EnsembleSource, Moments, accumulate_moments
+from learnclosure.diagnosis.quality import (
+    add_budget,
+    add_quality,
+    add_skill,
+    cautions,
+    tensor_components,
+)
 from learnclosure.diagnosis.tensor import (
     condition_number,
     scalar_diffusivity,
@@ -25,10 +34,6 @@ from learnclosure.errors import DiagnosisError
 from learnclosure.study import DiagnosisSettings
 
 FloatArray = npt.NDArray[np.float64]
-
-PAIRS = tuple(
-    (a, b, f"{row}{column}") for a, row in enumerate("xy") for b, column in enumerate("xy")
-)
 
 
 def diagnose(
@@ -68,7 +73,11 @@ def diagnose(
         ensemble, coarsening, progress=lambda share: report(0.7 * share, "moments")
     )
     inversion = SmoothInversion(geometry, area, chosen, len(ensemble.tracers))
-    estimator = Estimator(geometry, area, inversion, ensemble.tracers)
+    velocity = (moments.whole.mean["x_velocity"], moments.whole.mean["y_velocity"])
+    memory = MemoryGradient(velocity, geometry, chosen.memory_time, chosen.blurring_length)
+    gauge = HelmholtzSolver(geometry, chosen.gauge_boundary)
+    kept = chosen.kept_rotational_weight
+    estimator = Estimator(geometry, area, inversion, ensemble.tracers, memory, gauge, kept)
     whole = estimator.group(moments.whole)
     halves = tuple(estimator.group(half) for half in moments.halves)
     valid = estimator.determined(whole.equations)
@@ -77,16 +86,22 @@ def diagnose(
     error = estimator.standard_error(moments)
     report(0.95, "skill")
     skill = estimator.withheld_skill(whole, ensemble.withheld_tracers, valid)
+    other_form: Form = "memory" if chosen.form == "local" else "local"
+    other = estimator.group(moments.whole, other_form)
+    other_skill = estimator.withheld_skill(other, ensemble.withheld_tracers, valid)
 
     builder = StatisticsBuilder(coarsening.x, coarsening.y, len(geometry.mask))
     _add_mean_state(builder, ensemble, coarsening, moments)
     _add_tracers(builder, ensemble, whole, halves, moments)
+    _add_gauge(builder, gauge, whole)
     _add_tensor(builder, estimator, whole, valid, error)
-    _add_quality(builder, ensemble, estimator, whole, halves, valid)
-    _add_skill(builder, skill)
+    add_quality(builder, ensemble, estimator, whole, halves, valid)
+    add_budget(builder, ensemble, estimator, whole, halves, valid, error)
+    add_skill(builder, skill, other_form, other_skill)
     add_depth_axes(builder, ensemble, coarsening, moments.whole, whole.gradient, chosen)
     report(1.0, "done")
-    return builder.build(_attributes(ensemble, chosen, inversion, skill))
+    statistics = builder.build(_attributes(ensemble, chosen, inversion, skill))
+    return statistics.assign_attrs(cautions="; ".join(cautions(statistics)))
 
 
 def _check_tracers(ensemble: EnsembleSource) -> None:
@@ -113,10 +128,6 @@ def _check_determined(
         expected="tracers whose mean gradients point in different directions",
         remedy="use tracers that differ, along x as well as along y",
     )
-
-
-def _tensor_components(tensor: FloatArray) -> dict[str, FloatArray]:
-    return {name: tensor[..., a, b] for a, b, name in PAIRS}
 
 
 def _add_mean_state(
@@ -195,6 +206,20 @@ def _add_tracers(
             )
 
 
+def _add_gauge(builder: StatisticsBuilder, gauge: HelmholtzSolver, whole: GroupEstimate) -> None:
+    fluxes = np.stack(list(whole.flux.values()))
+    sea = np.where(gauge.geometry.mask, gauge.geometry.area, 0.0)
+    builder.coordinates["tracer"] = xr.Variable(
+        ("tracers",), np.array(list(whole.flux), dtype=object), {"long_name": "tracer"}
+    )
+    builder.add(
+        "rotational_share", rotational_share(fluxes, gauge.divergent_part(fluxes), sea),
+        ("tracers", "layer"),
+        "share of the mean square of the eddy flux that is not in its divergent part", "1",
+        references="Fox-Kemper, Ferrari and Pedlosky 2003, J. Phys. Oceanogr. 33, 478-483",
+    )  # fmt: skip
+
+
 def _add_tensor(
     builder: StatisticsBuilder,
     estimator: Estimator,
@@ -208,12 +233,12 @@ def _add_tensor(
         """Keep what the data determine; the fit's fill from neighbours is not written."""
         return np.where(where, values, np.nan)
 
-    for name, values in _tensor_components(whole.smooth.tensor).items():
+    for name, values in tensor_components(whole.smooth.tensor).items():
         builder.add_named(f"transport_tensor_{name}", known(values))
-    for name, values in _tensor_components(whole.least_squares).items():
+    for name, values in tensor_components(whole.least_squares).items():
         builder.add_named(f"least_squares_tensor_{name}", known(values))
     if error is not None:
-        for name, values in _tensor_components(error).items():
+        for name, values in tensor_components(error).items():
             builder.add_named(
                 f"transport_tensor_{name}", known(values), "_standard_error",
                 "standard error by leaving one member out, of the",
@@ -232,70 +257,6 @@ def _add_tensor(
         "floor_active", whole.smooth.floored.astype(np.int8), ("layer", "y", "x"),
         "1 where the floor holds up an eigenvalue of the symmetric part", "1",
     )  # fmt: skip
-
-
-def _add_quality(
-    builder: StatisticsBuilder,
-    ensemble: EnsembleSource,
-    estimator: Estimator,
-    whole: GroupEstimate,
-    halves: tuple[GroupEstimate, ...],
-    valid: npt.NDArray[np.bool_],
-) -> None:
-    for name, values in estimator.leverages(whole, ensemble.withheld_tracers).items():
-        builder.add(
-            f"leverage_{name}", values, ("layer", "y", "x"),
-            f"leverage of the mean gradient of {name} in the inversion", "1",
-        )  # fmt: skip
-    if not halves:
-        return
-    for a, b, name in PAIRS:
-        builder.add_named(
-            f"transport_tensor_{name}",
-            np.where(
-                valid,
-                np.stack([half.smooth.tensor[..., a, b] for half in halves]),
-                np.nan,
-            ),
-            "_halves",
-            "of each half of the members,",
-        )
-    reliability = estimator.component_reliability(halves, valid)
-    for a, b, name in PAIRS:
-        builder.add(
-            f"reliability_transport_tensor_{name}", reliability[a, b], ("layer",),
-            f"split-half reliability of the {name} component of the transport tensor", "1",
-            references="Spearman 1910 and Brown 1910, British Journal of Psychology 3",
-        )  # fmt: skip
-    builder.add(
-        "reliability_flux", estimator.flux_reliability(halves, valid), ("layer",),
-        "split-half reliability of the eddy fluxes, mean over tracers", "1",
-    )  # fmt: skip
-
-
-def _add_skill(builder: StatisticsBuilder, skill: WithheldSkill | None) -> None:
-    if skill is None:
-        return
-    builder.coordinates["withheld_tracer"] = xr.Variable(
-        ("withheld",), np.array(skill.tracers, dtype=object), {"long_name": "tracer left out"}
-    )
-    columns = {
-        "withheld_flux_skill": (skill.flux, "eddy fluxes", "the transport tensor"),
-        "withheld_divergence_skill": (
-            skill.divergence, "flux divergences", "the transport tensor",
-        ),
-        "least_squares_withheld_flux_skill": (
-            skill.least_squares_flux, "eddy fluxes", "plain least squares",
-        ),
-        "least_squares_withheld_divergence_skill": (
-            skill.least_squares_divergence, "flux divergences", "plain least squares",
-        ),
-    }  # fmt: skip
-    for name, (values, what, which) in columns.items():
-        builder.add(
-            name, values, ("withheld", "layer"),
-            f"coefficient of determination of {what} of tracers left out, by {which}", "1",
-        )  # fmt: skip
 
 
 def _attributes(
@@ -324,8 +285,17 @@ def _attributes(
         "periodic": " ".join(axes),
         "tracers": " ".join(ensemble.tracers),
         "withheld_tracers": " ".join(ensemble.withheld_tracers),
-        "tensor_convention": "J = -K grad C, rows flux, columns gradient; alpha = (Kyx - Kxy)/2",
+        "tensor_convention": (
+            f"J = -K {'grad C' if settings.form == 'local' else 'g, g the remembered grad C'}, "
+            "rows flux, columns gradient; alpha = (Kyx - Kxy)/2"
+        ),
         "coarsening_factor": np.int32(settings.coarsen),
+        "tensor_form": settings.form,
+        "memory_time_s": settings.memory_time,
+        "memory_length_m": settings.blurring_length,
+        "inverted_flux": settings.flux,
+        "rotational_weight": settings.kept_rotational_weight,
+        "gauge_boundary": settings.gauge_boundary,
         "smoothing_length_m": settings.smoothing_length,
         "floor_m2_s_1": settings.floor,
         "floor_method": settings.floor_method,

@@ -3,11 +3,14 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Literal
 
 import numpy as np
 import numpy.typing as npt
 
+from learnclosure.diagnosis.gauge import HelmholtzSolver
 from learnclosure.diagnosis.inversion import SmoothFit, SmoothInversion
+from learnclosure.diagnosis.memory import MemoryGradient
 from learnclosure.diagnosis.moments import GroupMoments, Moments
 from learnclosure.diagnosis.sampling import (
     jackknife_standard_error,
@@ -29,6 +32,8 @@ from learnclosure.ensemble.grid import Geometry, divergence, gradient
 FloatArray = npt.NDArray[np.float64]
 BoolArray = npt.NDArray[np.bool_]
 
+Form = Literal["local", "memory"]
+
 LEAST_MEMBERS_FOR_JACKKNIFE = 3
 
 
@@ -40,6 +45,8 @@ class GroupEstimate:
     ----------
     gradient, flux : dict of str to ndarray, shape (2, layer, y, x)
         Of every tracer, withheld ones included.
+    acted_on : dict of str to ndarray, shape (2, layer, y, x)
+        What the tensor acts on: the mean gradient, or the remembered one.
     equations : NormalEquations
     smooth : SmoothFit
     least_squares : ndarray, shape (layer, y, x, 2, 2), m2 s-1
@@ -47,6 +54,7 @@ class GroupEstimate:
 
     gradient: dict[str, FloatArray]
     flux: dict[str, FloatArray]
+    acted_on: dict[str, FloatArray]
     equations: NormalEquations
     smooth: SmoothFit
     least_squares: FloatArray
@@ -59,8 +67,10 @@ class WithheldSkill:
     tracers: tuple[str, ...]
     flux: FloatArray
     divergence: FloatArray
+    divergent_flux: FloatArray
     least_squares_flux: FloatArray
     least_squares_divergence: FloatArray
+    least_squares_divergent_flux: FloatArray
 
 
 class Estimator:
@@ -74,6 +84,13 @@ class Estimator:
     inversion : SmoothInversion
     tracers : tuple of str
         Tracers the tensor is fitted to.
+    memory : MemoryGradient
+        What the memory form acts on.
+    gauge : HelmholtzSolver
+        Takes the divergent part of fluxes.
+    rotational_weight : float, optional
+        What is left of the rest of each flux before it is inverted: 1 for the full flux, 0
+        for its divergent part.
     """
 
     def __init__(
@@ -82,15 +99,30 @@ class Estimator:
         area: FloatArray,
         inversion: SmoothInversion,
         tracers: tuple[str, ...],
+        memory: MemoryGradient,
+        gauge: HelmholtzSolver,
+        rotational_weight: float = 1.0,
     ) -> None:
         self.geometry = geometry
         self.area = area
         self.inversion = inversion
         self.tracers = tracers
+        self.memory = memory
+        self.form: Form = inversion.settings.form
+        self.gauge = gauge
+        self.rotational_weight = rotational_weight
 
     def gradients(self, mean: dict[str, FloatArray]) -> dict[str, FloatArray]:
         """Differentiate mean tracers, shape (2, layer, y, x) each."""
         return {name: np.stack(gradient(values, self.geometry)) for name, values in mean.items()}
+
+    def acted_on(
+        self, gradients: dict[str, FloatArray], form: Form | None = None
+    ) -> dict[str, FloatArray]:
+        """Return what the tensor of a form acts on, shape (2, layer, y, x) each."""
+        if (form or self.form) == "local":
+            return gradients
+        return {name: self.memory(values) for name, values in gradients.items()}
 
     def equations(
         self, fluxes: dict[str, FloatArray], gradients: dict[str, FloatArray],
@@ -99,17 +131,19 @@ class Estimator:
         """Sum the normal equations of the tracers used."""
         names = self.tracers if tracers is None else tracers
         return normal_equations(
-            np.stack([fluxes[name] for name in names]),
+            self.gauge.shrunk(np.stack([fluxes[name] for name in names]), self.rotational_weight),
             np.stack([gradients[name] for name in names]),
             self.area,
         )
 
-    def group(self, moments: GroupMoments) -> GroupEstimate:
+    def group(self, moments: GroupMoments, form: Form | None = None) -> GroupEstimate:
         """Estimate everything of one group of members.
 
         Parameters
         ----------
         moments : GroupMoments
+        form : {"local", "memory"}, optional
+            Form of the tensor in place of the settings'.
 
         Returns
         -------
@@ -117,10 +151,12 @@ class Estimator:
         """
         means = {name: moments.mean[name] for name in moments.flux}
         gradients = self.gradients(means)
-        equations = self.equations(moments.flux, gradients)
+        acted_on = self.acted_on(gradients, form)
+        equations = self.equations(moments.flux, acted_on)
         return GroupEstimate(
             gradient=gradients,
             flux=moments.flux,
+            acted_on=acted_on,
             equations=equations,
             smooth=self.inversion.fit(equations),
             least_squares=least_squares_tensor(equations),
@@ -149,17 +185,15 @@ class Estimator:
         left_out = []
         for member in range(members):
             mean, flux = moments.without_member(member)
-            equations = self.equations(flux, self.gradients(mean))
+            equations = self.equations(flux, self.acted_on(self.gradients(mean)))
             left_out.append(self.inversion.fit(equations).tensor)
         return jackknife_standard_error(np.stack(left_out))
 
-    def leverages(
-        self, estimate: GroupEstimate, withheld: tuple[str, ...]
-    ) -> dict[str, FloatArray]:
-        """Compute the leverage of each withheld tracer, shape (layer, y, x)."""
+    def leverages(self, estimate: GroupEstimate, tracers: tuple[str, ...]) -> dict[str, FloatArray]:
+        """Compute the leverage of named tracers, shape (layer, y, x)."""
         return {
-            name: leverage(estimate.equations, estimate.gradient[name], self.area)
-            for name in withheld
+            name: leverage(estimate.equations, estimate.acted_on[name], self.area)
+            for name in tracers
         }
 
     def withheld_skill(
@@ -188,29 +222,47 @@ class Estimator:
             smooth, plain = estimate.smooth.tensor, estimate.least_squares
             if not withheld:
                 rest = tuple(other for other in self.tracers if other != name)
-                equations = self.equations(estimate.flux, estimate.gradient, rest)
+                equations = self.equations(estimate.flux, estimate.acted_on, rest)
                 smooth = self.inversion.fit(equations).tensor
                 plain = least_squares_tensor(equations)
             scores.append(
-                (*self._score(smooth, estimate, name, valid),
-                 *self._score(plain, estimate, name, valid))
+                (*self.score(smooth, estimate, name, valid),
+                 *self.score(plain, estimate, name, valid))
             )  # fmt: skip
         columns = [np.stack(column) for column in zip(*scores, strict=True)]
         return WithheldSkill(names, *columns)
 
-    def _score(
+    def score(
         self, tensor: FloatArray, estimate: GroupEstimate, name: str, valid: BoolArray
-    ) -> tuple[FloatArray, FloatArray]:
+    ) -> tuple[FloatArray, FloatArray, FloatArray]:
+        """Score a tensor on the flux of one tracer, its divergence and its divergent part.
+
+        Parameters
+        ----------
+        tensor : ndarray, shape (layer, y, x, 2, 2), m2 s-1
+        estimate : GroupEstimate
+            Holds the tracer's flux and what the tensor acts on.
+        name : str
+        valid : ndarray of bool, shape (layer, y, x)
+
+        Returns
+        -------
+        flux, divergence, divergent_flux : ndarray, shape (layer,)
+            Coefficients of determination.
+        """
         true = estimate.flux[name][None]
-        predicted = down_gradient(tensor, estimate.gradient[name][None])
+        predicted = down_gradient(tensor, estimate.acted_on[name][None])
         weights = np.where(valid, self.area, 0.0)
         spread = np.stack(
             [divergence(flux[0, 0], flux[0, 1], self.geometry) for flux in (predicted, true)]
         )
         of_flux = flux_skill(predicted, true, weights)
         of_divergence = divergence_skill(spread[0][None], spread[1][None], weights)
+        parts = self.gauge.divergent_part(np.stack([predicted, true]))
+        of_part = flux_skill(parts[0], parts[1], weights)
         # A flux that does not vary has a divergence of rounding errors only.
-        return of_flux, np.where(np.isnan(of_flux), np.nan, of_divergence)
+        still = np.isnan(of_flux)
+        return of_flux, np.where(still, np.nan, of_divergence), np.where(still, np.nan, of_part)
 
     def component_reliability(
         self, halves: tuple[GroupEstimate, ...], valid: BoolArray

@@ -16,13 +16,17 @@ from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
-from scipy.sparse import bmat, coo_matrix, csc_matrix, diags_array
-from scipy.sparse.linalg import splu
+from scipy.sparse import csr_matrix
 
+from learnclosure.diagnosis.systems import (
+    LARGEST_DIRECT,
+    DirectSystem,
+    IterativeSystem,
+    LayerSystem,
+    smoothness_operator,
+)
 from learnclosure.diagnosis.tensor import (
-    LARGEST_CONDITION_NUMBER,
     NormalEquations,
-    condition_number,
     scalar_diffusivity,
     with_floor,
 )
@@ -31,6 +35,7 @@ from learnclosure.study import DiagnosisSettings
 
 FloatArray = npt.NDArray[np.float64]
 BoolArray = npt.NDArray[np.bool_]
+IndexArray = npt.NDArray[np.int64]
 
 ITERATIONS = 30
 PENALTY_SHARE = 0.3
@@ -48,121 +53,13 @@ class SmoothFit:
         Zero on land.
     floored : ndarray of bool, shape (layer, y, x)
         Where the floor holds an eigenvalue up.
+    negative : ndarray of bool, shape (layer, y, x)
+        Where the symmetric part would have a negative eigenvalue without the floor.
     """
 
     tensor: FloatArray
     floored: BoolArray
-
-
-def _neighbour_pairs(mask: BoolArray, periodic: bool, axis: int) -> tuple[FloatArray, ...]:
-    """Flat indices of sea cells and of their sea neighbours further up an axis."""
-    rows, columns = mask.shape
-    index = np.arange(rows * columns).reshape(rows, columns)
-    there = mask & np.roll(mask, -1, axis)
-    if not periodic:
-        edge: list[slice] = [slice(None), slice(None)]
-        edge[axis] = slice(-1, None)
-        there[tuple(edge)] = False
-    return index[there], np.roll(index, -1, axis)[there]
-
-
-def smoothness_operator(geometry: Geometry, layer: int) -> csc_matrix:
-    """Matrix of ``sum_faces (side/distance) (K_i - K_j)^2`` over the sea of a layer.
-
-    Parameters
-    ----------
-    geometry : Geometry
-    layer : int
-
-    Returns
-    -------
-    scipy.sparse.csc_matrix, shape (y x, y x), 1
-    """
-    mask = geometry.mask[layer]
-    size = mask.size
-    total = csc_matrix((size, size))
-    for axis, along, across, periodic in (
-        (1, geometry.dx, geometry.dy, geometry.periodic_x),
-        (0, geometry.dy, geometry.dx, geometry.periodic_y),
-    ):
-        here, there = _neighbour_pairs(mask, periodic, axis)
-        distance = 0.5 * (along.ravel()[here] + along.ravel()[there])
-        side = 0.5 * (across.ravel()[here] + across.ravel()[there])
-        strength = side / distance
-        link = coo_matrix((strength, (here, there)), shape=(size, size))
-        link = link + link.T
-        total = total + diags_array(np.asarray(link.sum(axis=1)).ravel()) - link
-    return csc_matrix(total)
-
-
-class _LayerSystem:
-    """The sparse system of one layer, factorised once for any number of right-hand sides."""
-
-    def __init__(
-        self, M: FloatArray, area: FloatArray, smoothness: csc_matrix, strength: float,
-        wet: npt.NDArray[np.int64],
-    ) -> None:  # fmt: skip
-        smooth = strength * smoothness[wet][:, wet]
-        # A cell that neither data nor neighbours reach is held at zero; the others are not.
-        undetermined = condition_number(M) > LARGEST_CONDITION_NUMBER
-        weak = 1e-12 * max(float(np.max(area * np.trace(M, axis1=-2, axis2=-1))), 1e-300)
-        blocks = [[diags_array(area * M[:, a, b]) for b in range(2)] for a in range(2)]
-        for a in range(2):
-            blocks[a][a] = blocks[a][a] + smooth + diags_array(weak * undetermined)
-        # The matrix is symmetric and positive definite: no pivoting, half the fill-in.
-        self.factor = splu(
-            csc_matrix(bmat(blocks)),
-            permc_spec="MMD_AT_PLUS_A",
-            diag_pivot_thresh=0.0,
-            options={"SymmetricMode": True},
-        )
-        self.area = area
-
-    def solve(self, right: FloatArray) -> FloatArray:
-        """Solve for K, shape (cell, 2, 2), given B of the same shape."""
-        scaled = self.area[:, None, None] * right
-        sides = np.concatenate([scaled[:, :, 0], scaled[:, :, 1]])
-        found = self.factor.solve(sides)
-        count = len(self.area)
-        return np.stack([found[:count], found[count:]], axis=-1)
-
-
-def _fit_layer(
-    M: FloatArray,
-    B: FloatArray,
-    scalar: FloatArray,
-    area: FloatArray,
-    smoothness: csc_matrix,
-    wet: npt.NDArray[np.int64],
-    settings: DiagnosisSettings,
-    pull: float,
-) -> tuple[FloatArray, BoolArray]:
-    trace = np.trace(M, axis1=-2, axis2=-1)
-    mean = 0.5 * float(np.sum(area * trace) / np.sum(area))
-    identity = np.eye(2)
-    M = M + pull * mean * identity
-    B = B + pull * mean * scalar[:, None, None] * identity
-    strength = settings.smoothing_length**2 * mean
-    system = _LayerSystem(M, area, smoothness, strength, wet)
-    free = system.solve(B)
-    bounded = with_floor(free, settings.floor)
-    if settings.floor_method == "projection" or np.array_equal(bounded, free):
-        return bounded, _differs(bounded, free)
-    rho = PENALTY_SHARE * 0.5 * float(np.median(trace[trace > 0.0]))
-    penalised = _LayerSystem(M + rho * identity, area, smoothness, strength, wet)
-    multiplier = np.zeros_like(free)
-    fit = free
-    for _ in range(ITERATIONS):
-        bounded = with_floor(fit + multiplier, settings.floor)
-        multiplier = multiplier + fit - bounded
-        fit = penalised.solve(B + rho * (bounded - multiplier))
-    bounded = with_floor(fit + multiplier, settings.floor)
-    return bounded, _differs(bounded, fit + multiplier)
-
-
-def _differs(bounded: FloatArray, free: FloatArray) -> BoolArray:
-    change = np.abs(bounded - free).max(axis=(-2, -1))
-    return np.asarray(change > 1e-9 * np.abs(free).max(axis=(-2, -1)))
+    negative: BoolArray
 
 
 class SmoothInversion:
@@ -174,7 +71,7 @@ class SmoothInversion:
     area : ndarray, shape (layer, y, x), m2
         Sea area of each cell.
     settings : DiagnosisSettings
-        Smoothing length, floor and how it is kept.
+        Smoothing length, floor, how it is kept and how the systems are solved.
     tracers : int
         Number of tracers, which decides the default pull to the scalar fit.
     """
@@ -187,39 +84,109 @@ class SmoothInversion:
         self.settings = settings
         default = PULL_FOR_FEW_TRACERS if tracers < FEW_TRACERS else 0.0
         self.pull = default if settings.scalar_pull is None else settings.scalar_pull
+        self._wet = [np.flatnonzero(mask) for mask in geometry.mask]
         self._smoothness = [
-            smoothness_operator(geometry, layer) for layer in range(len(geometry.mask))
+            csr_matrix(smoothness_operator(geometry, layer)[wet][:, wet])
+            for layer, wet in enumerate(self._wet)
         ]
 
-    def fit(self, equations: NormalEquations) -> SmoothFit:
+    def fit(
+        self,
+        equations: NormalEquations,
+        *,
+        length: float | None = None,
+        floor: bool = True,
+    ) -> SmoothFit:
         """Fit tensors to normal equations.
 
         Parameters
         ----------
         equations : NormalEquations
+        length : float, optional, m
+            Smoothing length in place of the settings'.
+        floor : bool, optional
+            Whether the floor is kept; without it the fit is linear in the fluxes.
 
         Returns
         -------
         SmoothFit
         """
+        chosen = self.settings.smoothing_length if length is None else length
         tensor = np.zeros_like(equations.B)
         floored = np.zeros(self.geometry.mask.shape, dtype=bool)
+        negative = np.zeros_like(floored)
         scalar = scalar_diffusivity(equations)
-        for layer, smoothness in enumerate(self._smoothness):
-            wet = np.flatnonzero(self.geometry.mask[layer])
+        for layer, wet in enumerate(self._wet):
             M = equations.M[layer].reshape(-1, 2, 2)[wet]
             if not np.trace(M, axis1=-2, axis2=-1).any():
                 continue
-            found, active = _fit_layer(
+            fit = _LayerFit(
                 M,
                 equations.B[layer].reshape(-1, 2, 2)[wet],
                 scalar[layer].ravel()[wet],
                 self.area[layer].ravel()[wet],
-                smoothness,
-                wet,
-                self.settings,
+                self._smoothness[layer],
+                chosen,
                 self.pull,
+                self._direct(len(wet)),
             )
-            tensor[layer].reshape(-1, 2, 2)[wet] = found
-            floored[layer].reshape(-1)[wet] = active
-        return SmoothFit(tensor, floored)
+            free = fit.free()
+            bounded = self._bounded(fit, free) if floor else free
+            tensor[layer].reshape(-1, 2, 2)[wet] = bounded
+            floored[layer].reshape(-1)[wet] = floor & _differs(bounded, fit.unbounded)
+            negative[layer].reshape(-1)[wet] = _differs(with_floor(free, 0.0), free)
+        return SmoothFit(tensor, floored, negative)
+
+    def _direct(self, cells: int) -> bool:
+        if self.settings.solver == "auto":
+            return cells <= LARGEST_DIRECT
+        return self.settings.solver == "direct"
+
+    def _bounded(self, fit: _LayerFit, free: FloatArray) -> FloatArray:
+        bounded = with_floor(free, self.settings.floor)
+        if self.settings.floor_method == "projection" or np.array_equal(bounded, free):
+            return bounded
+        return fit.bounded(self.settings.floor)
+
+
+class _LayerFit:
+    """The fit of one layer's sea cells, without a floor and then with one."""
+
+    def __init__(
+        self, M: FloatArray, B: FloatArray, scalar: FloatArray, area: FloatArray,
+        smoothness: csr_matrix, length: float, pull: float, direct: bool,
+    ) -> None:  # fmt: skip
+        self._trace = np.trace(M, axis1=-2, axis2=-1)
+        mean = 0.5 * float(np.sum(area * self._trace) / np.sum(area))
+        identity = np.eye(2)
+        self._M = M + pull * mean * identity
+        self._B = B + pull * mean * scalar[:, None, None] * identity
+        self._area = area
+        self._smooth = length**2 * mean * smoothness
+        self._kind = DirectSystem if direct else IterativeSystem
+
+    def _system(self, M: FloatArray) -> LayerSystem:
+        return self._kind(M, self._area, self._smooth)
+
+    def free(self) -> FloatArray:
+        """Fit without a floor, shape (cell, 2, 2)."""
+        self.unbounded = self._system(self._M).solve(self._B)
+        return self.unbounded
+
+    def bounded(self, floor: float) -> FloatArray:
+        """Fit with a floor, shape (cell, 2, 2); to be called after ``free``."""
+        rho = PENALTY_SHARE * 0.5 * float(np.median(self._trace[self._trace > 0.0]))
+        penalised = self._system(self._M + rho * np.eye(2))
+        fit = self.unbounded
+        multiplier = np.zeros_like(fit)
+        for _ in range(ITERATIONS):
+            bounded = with_floor(fit + multiplier, floor)
+            multiplier = multiplier + fit - bounded
+            fit = penalised.solve(self._B + rho * (bounded - multiplier), fit)
+        self.unbounded = fit + multiplier
+        return with_floor(self.unbounded, floor)
+
+
+def _differs(bounded: FloatArray, free: FloatArray) -> BoolArray:
+    change = np.abs(bounded - free).max(axis=(-2, -1))
+    return np.asarray(change > 1e-9 * np.abs(free).max(axis=(-2, -1)))

@@ -17,7 +17,7 @@ import numpy.typing as npt
 from scipy.sparse import bmat, csc_matrix, diags_array
 from scipy.sparse.linalg import splu
 
-from learnclosure.diagnosis.inversion import smoothness_operator
+from learnclosure.diagnosis.systems import smoothness_operator
 from learnclosure.diagnosis.tensor import LARGEST_CONDITION_NUMBER
 from learnclosure.ensemble.grid import Geometry
 

@@ -34,6 +34,7 @@ from learnclosure.ensemble.sources import (
     open_members,
 )
 from learnclosure.ensemble.stratification import buoyancy_rule
+from learnclosure.ensemble.total_flux import TotalFlux, find_total_fluxes
 from learnclosure.ensemble.upward import needed_faces, upward_at_centres, upward_notes
 from learnclosure.ensemble.vertical import is_top_last
 from learnclosure.errors import SourceError
@@ -99,6 +100,9 @@ class Ensemble:
         self.units_before = self._conversions.before
         self.units = self._conversions.units
         self.times = read_times(layout)
+        self._total_fluxes = find_total_fluxes(
+            table, self.roles, self._conversions.tracers, first, layout, self.times
+        )
         self.grid: Grid = build_grid(layout, self._find_mask(first), self._top_last)
         check_grids_alike(self.members, layout.used, self.axes.time)
         self.member_labels = tuple(member.label for member in self.members)
@@ -144,7 +148,9 @@ class Ensemble:
         dict of str to ndarray, shape (member, layer, y, x)
             ``x_velocity`` and ``y_velocity`` at cell centres in m s-1, every tracer under
             its own name, and ``buoyancy`` in m s-2 if the ensemble has it; the top layer
-            first, zero on land.
+            first, zero on land. Where the files hold total fluxes of a tracer, also
+            ``<tracer>_within_x`` and ``_within_y``, its eddy flux within the window each
+            time stands for.
 
         Raises
         ------
@@ -165,6 +171,11 @@ class Ensemble:
             result[name] = np.where(mask, self._conversions.tracers[name](raw[name]), 0.0)
         if self.roles.z_velocity is not None:
             result["z_velocity"] = self._upward_velocity(member, self.roles.z_velocity, time)
+        for flux in self._total_fluxes:
+            # The flux carries the tracer without the offset that took it to SI units.
+            carried = result[flux.tracer] - self._conversions.tracers[flux.tracer].offset
+            mean = result[f"{flux.axis}_velocity"] * np.where(mask, carried, 0.0)
+            result[f"{flux.tracer}_within_{flux.axis}"] = self._total(member, flux, time) - mean
         if self.has_buoyancy:
             parts = {
                 part: np.where(mask, self._conversions.stratifying[part](raw[name]), 0.0)
@@ -250,6 +261,20 @@ class Ensemble:
             If a value in the sea is missing or a file cannot be read.
         """
         return np.stack([self._scalar(member, name, time) for member in self.members])
+
+    def _total(self, member: Member, flux: TotalFlux, time: int) -> FloatArray:
+        """Read a total flux at cell centres, zero on land."""
+        mask = self.grid.geometry.mask
+        values = self._read(member, flux.name, time)
+        face = flux.face if flux.face in ALONG else None
+        needed = mask
+        if face is not None:
+            points = values.shape[self._cells.along(face)[0]]
+            needed = between_cells(mask, face, points, self._cells)
+            if face == self._face(f"{flux.axis}_velocity"):
+                needed = needed & ~self._walls[f"{flux.axis}_velocity"]
+        self._require(needed, np.isfinite(values), member, flux.name, time)
+        return np.where(mask, flux.at(time) * to_centres(values, face, self._cells), 0.0)
 
     def _scalar(self, member: Member, name: str, time: int) -> FloatArray:
         """Read a field at cell centres as the files have it, checked against the mask."""

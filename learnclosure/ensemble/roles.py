@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
-from dataclasses import dataclass
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass, field
 
 import xarray as xr
 
@@ -42,6 +42,8 @@ class Roles:
         For the stratification, where it is not fixed in time.
     z_velocity : str or None
         Upward velocity.
+    total_fluxes : mapping of str to tuple of str
+        Total fluxes along x and y by tracer, where the model summed them over its steps.
     """
 
     x_velocity: str
@@ -52,6 +54,7 @@ class Roles:
     temperature: str | None
     salinity: str | None
     z_velocity: str | None = None
+    total_fluxes: Mapping[str, tuple[str, str]] = field(default_factory=dict)
 
     @property
     def stratifying(self) -> dict[str, str]:
@@ -71,7 +74,9 @@ class Roles:
     def fields(self) -> tuple[str, ...]:
         """All fields read, each once."""
         upward = () if self.z_velocity is None else (self.z_velocity,)
-        return tuple(dict.fromkeys((self.x_velocity, self.y_velocity, *upward, *self.scalars)))
+        fluxes = (name for pair in self.total_fluxes.values() for name in pair)
+        names = (self.x_velocity, self.y_velocity, *upward, *self.scalars, *fluxes)
+        return tuple(dict.fromkeys(names))
 
 
 def _fields(dataset: xr.Dataset) -> list[str]:
@@ -196,7 +201,41 @@ def find_roles(table: EnsembleTable, dataset: xr.Dataset, where: object) -> Role
             named = _known_scalar(dataset, part)
         optional[part] = named
     optional["z_velocity"] = _upward_velocity(table, dataset, tracers[0], where)
-    return Roles(x_velocity, y_velocity, tuple(tracers), tuple(withheld), **optional)
+    fluxes = _total_fluxes(table, dataset, (*tracers, *withheld), where)
+    return Roles(
+        x_velocity, y_velocity, tuple(tracers), tuple(withheld), **optional, total_fluxes=fluxes
+    )
+
+
+def _total_fluxes(
+    table: EnsembleTable, dataset: xr.Dataset, tracers: tuple[str, ...], where: object
+) -> dict[str, tuple[str, str]]:
+    """Total fluxes named by the study, or by their attribute ``total_flux_of``."""
+    named = table.variables.total_fluxes
+    for tracer, pair in named.items():
+        if tracer not in tracers:
+            raise RoleError(
+                "total fluxes are named for something that is no tracer",
+                where=f"{where}: {tracer}",
+                expected=f"one of {_listed(tracers)}",
+                remedy="correct [ensemble.variables] total_fluxes in the study",
+            )
+        for name in pair:
+            require_variable(dataset, name, "[ensemble.variables] total_fluxes", where)
+    if named:
+        return dict(named)
+    found = {}
+    for tracer in tracers:
+        by_face = {
+            str(dataset[name].attrs.get("face")): name
+            for name in _fields(dataset)
+            if dataset[name].attrs.get("total_flux_of") == tracer
+        }
+        along_x = by_face.get("east") or by_face.get("west")
+        along_y = by_face.get("north") or by_face.get("south")
+        if along_x and along_y:
+            found[tracer] = (along_x, along_y)
+    return found
 
 
 def _upward_velocity(

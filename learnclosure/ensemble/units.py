@@ -183,6 +183,27 @@ def conversion(text: str, target: str, where: str) -> Conversion:
     return Conversion(round(one - zero, 12) if zero else float(one), float(zero), target)
 
 
+def is_convertible(text: str, target: str, where: str) -> bool:
+    """Tell whether a unit measures the same thing as another.
+
+    Parameters
+    ----------
+    text, target : str
+    where : str
+        File and variable, for the message.
+
+    Returns
+    -------
+    bool
+
+    Raises
+    ------
+    UnitError
+        If a unit is unknown.
+    """
+    return bool(_parse(text, where)[1].is_compatible_with(_parse(target, where)[1]))
+
+
 def tracer_conversion(text: str, where: str) -> Conversion:
     """Find how a tracer's values are brought to SI: temperatures in K, the rest as it is.
 

@@ -19,6 +19,7 @@ from learnclosure.simulate.files import (
     MemberFile,
     TracerLabel,
     expect_counts,
+    flux_name,
     is_complete,
     write_record,
 )
@@ -45,7 +46,7 @@ def _silent(region: str, share: float, note: str) -> None:
     """Report nothing."""
 
 
-def _layout(regime: ChannelRegime, times: Sequence[float]) -> Layout:
+def _layout(regime: ChannelRegime, times: Sequence[float], window: float | None) -> Layout:
     return Layout(
         title=f"two-layer quasi-geostrophic channel, invented region {regime.name}",
         source="learnclosure built-in channel, potential vorticity and tracers by "
@@ -60,6 +61,7 @@ def _layout(regime: ChannelRegime, times: Sequence[float]) -> Layout:
         periodic="x y",
         times=np.array(times),
         tracers=tuple(TracerLabel(wave.name, wave.long_name, wave.role) for wave in CHANNEL_WAVES),
+        window=window,
     )
 
 
@@ -118,6 +120,18 @@ def _write_snapshot(channel: Channel, files: Sequence[MemberFile], time: int) ->
         file.write(time, {"x_velocity": u[member], "y_velocity": v[member], **tracers})
 
 
+def _write_window(channel: Channel, files: Sequence[MemberFile], time: int) -> None:
+    means = channel.window_means()
+    u, v = channel.centre_velocities(means.corner)
+    for member, file in enumerate(files):
+        fields = {"x_velocity": u[member], "y_velocity": v[member]}
+        for index, wave in enumerate(CHANNEL_WAVES):
+            fields[wave.name] = means.tracers[member, :, index]
+            fields[flux_name(wave.name, "x")] = means.flux_x[member, :, index]
+            fields[flux_name(wave.name, "y")] = means.flux_y[member, :, index]
+        file.write(time, fields)
+
+
 def simulate_channel(
     regime: ChannelRegime,
     folder: Path,
@@ -127,6 +141,7 @@ def simulate_channel(
     spacing_days: float = SPACING_DAYS,
     spinup_days: float = SPINUP_DAYS,
     tracer_days: float = TRACER_DAYS,
+    fluxes: bool = False,
     seed: int = 0,
     progress: Progress | None = None,
 ) -> Path:
@@ -147,6 +162,9 @@ def simulate_channel(
         Time between snapshots.
     spinup_days, tracer_days : float, optional, days
         Time before tracers are released, and from there to the first snapshot.
+    fluxes : bool, optional
+        Write means over the time between snapshots instead of snapshots, and with them the
+        total tracer fluxes through the faces, summed over every time step.
     seed : int, optional
     progress : callable, optional
         Called with ``(region, share done, note)`` once a simulated day.
@@ -171,7 +189,7 @@ def simulate_channel(
     record = {
         "regime": asdict(regime), "members": members, "snapshots": snapshots,
         "spacing_days": spacing_days, "spinup_days": spinup_days, "tracer_days": tracer_days,
-        "seed": seed, "targets": [asdict(wave) for wave in CHANNEL_WAVES],
+        "fluxes": fluxes, "seed": seed, "targets": [asdict(wave) for wave in CHANNEL_WAVES],
     }  # fmt: skip
     if is_complete(target, record, members):
         report(regime.name, 1.0, "kept what is there")
@@ -180,7 +198,9 @@ def simulate_channel(
     steps = _snapshot_steps(regime, snapshots, spinup_days + tracer_days, spacing_days)
     key = [seed, *regime.name.encode()]
     channel = Channel(regime, [np.random.default_rng([*key, member]) for member in range(members)])
-    layout = _layout(regime, [step / regime.steps_per_day for step in steps])
+    layout = _layout(
+        regime, [step / regime.steps_per_day for step in steps], spacing_days if fluxes else None
+    )
     stopwatch = _Stopwatch(channel, release, steps[-1], report)
     with atomic_folder(target) as temporary:
         with ExitStack() as stack:
@@ -190,9 +210,15 @@ def simulate_channel(
             ]
             _run_to(channel, release, stopwatch)
             channel.release_tracers(target_fields(regime))
+            if fluxes:
+                first = steps[0] - round(spacing_days * regime.steps_per_day)
+                _run_to(channel, max(first, release), stopwatch)
             for time, step in enumerate(steps):
+                if fluxes:
+                    channel.start_window()
                 _run_to(channel, step, stopwatch)
-                _write_snapshot(channel, files, time)
+                write = _write_window if fluxes else _write_snapshot
+                write(channel, files, time)
         write_record(temporary, record)
     report(regime.name, 1.0, f"{members} members, {snapshots} snapshots")
     return target
@@ -207,6 +233,7 @@ def simulate_regions(
     spacing_days: float = SPACING_DAYS,
     spinup_days: float = SPINUP_DAYS,
     tracer_days: float = TRACER_DAYS,
+    fluxes: bool = False,
     seed: int = 0,
     workers: int = 2,
     progress: Progress | None = None,
@@ -219,7 +246,7 @@ def simulate_regions(
         Their names must differ.
     folder : Path
         Folder in which a folder for each region is made.
-    members, snapshots, spacing_days, spinup_days, tracer_days, seed
+    members, snapshots, spacing_days, spinup_days, tracer_days, fluxes, seed
         As for `simulate_channel`.
     workers : int, optional
         Regions simulated at once; with one, no other process is started.
@@ -245,7 +272,8 @@ def simulate_regions(
     jobs = {
         regime.name: partial(
             simulate_channel, regime, folder, members=members, snapshots=snapshots,
-            spacing_days=spacing_days, spinup_days=spinup_days, tracer_days=tracer_days, seed=seed,
+            spacing_days=spacing_days, spinup_days=spinup_days, tracer_days=tracer_days,
+            fluxes=fluxes, seed=seed,
         )
         for regime in regimes
     }  # fmt: skip

@@ -28,6 +28,7 @@ from learnclosure.errors import SimulationError
 from learnclosure.simulate import kernels
 from learnclosure.simulate.kernels import HALO, Field, Spectrum
 from learnclosure.simulate.regimes import DAY, ChannelRegime
+from learnclosure.simulate.windows import WindowMeans, WindowSums
 
 LARGEST_COURANT = 0.4
 """Largest ``(|u| + |v|) dt / dx`` the scheme is run with; it is stable up to 0.45."""
@@ -114,6 +115,7 @@ class Channel:
         self._tracer_increments = _two_of((members, 2, 0, *plain))
         self._tracer_source = np.zeros((0, *plain), np.float32)
         self._tracer_start = 0
+        self._window: WindowSums | None = None
         for member, generator in enumerate(generators):
             self.vorticity[member] = self._starting_vorticity(generator)
         self._invert()
@@ -237,6 +239,20 @@ class Channel:
         self.tracers[...] = targets
         self._tracer_start = self.steps
 
+    def start_window(self) -> None:
+        """Start summing velocities, tracers and tracer fluxes anew, for their time means."""
+        self._window = WindowSums(self._tracers.shape)
+
+    def window_means(self) -> WindowMeans:
+        """Return time means over the steps since ``start_window``.
+
+        Returns
+        -------
+        WindowMeans
+        """
+        assert self._window is not None
+        return self._window.means(self.regime.spacing * self.regime.steps_per_day / DAY)
+
     def advance(self, steps: int) -> None:
         """Take time steps without any check.
 
@@ -244,7 +260,12 @@ class Channel:
         ----------
         steps : int
         """
+        members, _, _, *padded = self._tracers.shape
+        window = self._window or WindowSums((members, 2, 0, *padded))
         for _ in range(steps):
+            if self._window is not None:
+                window.corner += self._corner
+                window.steps += 1
             age = min(self.steps, 2)
             tracer_age = min(self.steps - self._tracer_start, 2)
             kernels.advance_members(
@@ -252,34 +273,46 @@ class Channel:
                 *self._tracer_increments, self._tracer_source, self._ridge, self._target,
                 self._coefficients, self._background, self.regime.spacing, self._courant,
                 self._tracer_decay, ADAMS_BASHFORTH[age], ADAMS_BASHFORTH[tracer_age],
+                window.content, window.flux_x, window.flux_y,
             )  # fmt: skip
             self._increments = self._increments[1], self._increments[0]
             self._tracer_increments = self._tracer_increments[1], self._tracer_increments[0]
             self.steps += 1
             self._invert()
 
-    def face_velocities(self) -> tuple[Float64, Float64]:
+    def face_velocities(self, corner: Float64 | None = None) -> tuple[Float64, Float64]:
         """Velocities normal to the faces, background flow included.
+
+        Parameters
+        ----------
+        corner : ndarray, optional, shape (member, 2, y, x), m2 s-1
+            Streamfunction at north-east corners; that of now if not given.
 
         Returns
         -------
         west, south : ndarray, shape (member, 2, y, x), m s-1
             On the west and the south face of each cell.
         """
-        corner = self._corner.astype(np.float64) / self.regime.spacing
+        chosen = self._corner.astype(np.float64) if corner is None else corner
+        corner = chosen / self.regime.spacing
         drift = self._background.astype(np.float64)[:, None, None]
         east = drift - (corner - np.roll(corner, 1, axis=-2))
         north = corner - np.roll(corner, 1, axis=-1)
         return np.roll(east, 1, axis=-1), np.roll(north, 1, axis=-2)
 
-    def centre_velocities(self) -> tuple[Float64, Float64]:
+    def centre_velocities(self, corner: Float64 | None = None) -> tuple[Float64, Float64]:
         """Velocities at cell centres, the mean of those on opposite faces.
+
+        Parameters
+        ----------
+        corner : ndarray, optional, shape (member, 2, y, x), m2 s-1
+            As for `face_velocities`.
 
         Returns
         -------
         u, v : ndarray, shape (member, 2, y, x), m s-1
         """
-        west, south = self.face_velocities()
+        west, south = self.face_velocities(corner)
         u = 0.5 * (west + np.roll(west, -1, axis=-1))
         v = 0.5 * (south + np.roll(south, -1, axis=-2))
         return u, v

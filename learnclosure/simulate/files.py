@@ -65,6 +65,9 @@ class Layout:
     tracers : tuple of TracerLabel
     precision : {"f4", "f8"}
         Of velocities and tracers.
+    window : float, optional, days
+        Where fields are means over windows that end at the times: how long these are.
+        Total tracer fluxes through the faces are then written too.
     """
 
     title: str
@@ -80,6 +83,12 @@ class Layout:
     times: Float64
     tracers: tuple[TracerLabel, ...]
     precision: str = "f4"
+    window: float | None = None
+
+
+def flux_name(tracer: str, axis: str) -> str:
+    """Name of the variable with a tracer's total flux along an axis."""
+    return f"{tracer}_flux_{axis}"
 
 
 def member_path(folder: Path, member: int) -> Path:
@@ -114,16 +123,29 @@ class MemberFile:
         self._write_coordinates(layout)
         self._write_static(layout, member)
         dimensions = ("time", "layer", "y", "x")
+        common = {"coordinates": "realization"}
+        if layout.window is not None:
+            common["cell_methods"] = "time: mean"
         for name, (standard_name, long_name) in VELOCITIES.items():
             self._create(
                 name, dimensions, layout.precision, standard_name=standard_name,
-                long_name=long_name, units="m s-1", coordinates="realization",
+                long_name=long_name, units="m s-1", **common,
             )  # fmt: skip
         for label in layout.tracers:
             self._create(
                 label.name, dimensions, layout.precision, long_name=label.long_name,
-                units=label.units, tracer_role=label.role, coordinates="realization",
+                units=label.units, tracer_role=label.role, **common,
             )  # fmt: skip
+            if layout.window is None:
+                continue
+            units = "m s-1" if label.units == "1" else f"{label.units} m s-1"
+            for axis, face in (("x", "east"), ("y", "north")):
+                self._create(
+                    flux_name(label.name, axis), dimensions, layout.precision,
+                    long_name=f"total flux of {label.long_name} along {axis} through the "
+                    f"{face} face of the cell",
+                    units=units, total_flux_of=label.name, face=face, **common,
+                )  # fmt: skip
 
     def __enter__(self) -> MemberFile:
         return self
@@ -159,10 +181,16 @@ class MemberFile:
             "y": len(layout.y),
             "x": len(layout.x),
         }
+        bounds = {}
+        if layout.window is not None:
+            bounds["bounds"] = "time_bounds"
+            self._file.dimensions["bound"] = 2
+            ends = np.stack([layout.times - layout.window, layout.times], axis=1)
+            self._create("time_bounds", ("time", "bound"), "f8", ends)
         self._create(
             "time", ("time",), "f8", layout.times, standard_name="time", long_name="time",
             units="days since 2000-01-01 00:00:00", calendar="standard", axis="T",
-            units_metadata="leap_seconds: none",
+            units_metadata="leap_seconds: none", **bounds,
         )  # fmt: skip
         self._create(
             "layer", ("layer",), "i4", np.arange(layers), standard_name="model_level_number",

@@ -244,6 +244,13 @@ def advance_field(
 
 
 @part_of_kernel
+def _gather(total: Field, part: Field) -> None:
+    """Add to a running sum."""
+    for cell in range(total.size):
+        total[cell] += part[cell]
+
+
+@part_of_kernel
 def _separation(corner: Field, out: Field, mean: Field) -> None:
     """Average the upper minus the lower streamfunction to cell centres, and along x."""
     _, rows, columns = corner.shape
@@ -316,6 +323,7 @@ def advance_members(
     tracers: Field, tracers_newer: Field, tracers_older: Field, tracer_source: Field,
     ridge: Field, target: Field, coefficients: Field, background: Field, spacing: float,
     courant: float, decay: float, vorticity_weights: Field, tracer_weights: Field,
+    content: Field, flux_x: Field, flux_y: Field,
 ) -> None:  # fmt: skip
     """Advance potential vorticity and tracers of all members by one step, in place.
 
@@ -347,12 +355,17 @@ def advance_members(
         Share of a tracer that decays in one step.
     vorticity_weights, tracer_weights : ndarray of float32, shape (3,)
         Adams-Bashforth weights.
+    content, flux_x : ndarray of float32, shape (member, 2, tracer, y, x + 6)
+        Receive, added to what is there, each tracer as it stood before the step and what
+        passed the west faces in it, in cell contents; they may hold no tracer.
+    flux_y : ndarray of float32, shape (member, 2, tracer, y + 1, x + 6)
+        The same for what passed the south faces.
     """
     members, layers, rows, columns = corner.shape
     stride = columns + 2 * HALO
     west = np.zeros((rows, stride), np.float32)
     south = np.zeros((rows + 1, stride), np.float32)
-    source = np.zeros((rows, stride), np.float32)
+    forcing = np.zeros((rows, stride), np.float32)
     work = np.zeros((3, (rows + 1) * stride), np.float32)
     separation = np.empty((rows, columns), np.float32)
     mean = np.empty(rows, np.float32)
@@ -362,16 +375,27 @@ def advance_members(
             face_velocities(corner[member, layer], spacing, background[layer], courant, west, south)
             vorticity_source(
                 layer, vorticity[member, layer], ridge, separation, mean, target, south,
-                coefficients[layer], source,
+                coefficients[layer], forcing,
             )  # fmt: skip
-            advance_field(
-                vorticity[member, layer], vorticity_newer[member, layer],
-                vorticity_older[member, layer], source, 0.0, west, south,
-                vorticity_weights, work,
-            )  # fmt: skip
-            for tracer in range(tracers.shape[2]):
-                advance_field(
-                    tracers[member, layer, tracer], tracers_newer[member, layer, tracer],
-                    tracers_older[member, layer, tracer], tracer_source[tracer], decay,
-                    west, south, tracer_weights, work,
-                )  # fmt: skip
+            # One call for vorticity and tracers alike: it is taken in, and compiled, once.
+            padded, rate, weights = vorticity[member, layer], 0.0, vorticity_weights
+            source = forcing
+            newer, older = vorticity_newer[member, layer], vorticity_older[member, layer]
+            for number in range(tracers.shape[2] + 1):
+                gathers = 0 < number <= content.shape[2]
+                if gathers:
+                    first = HALO * stride
+                    line = padded.reshape(padded.size)[first : first + rows * stride]
+                    total = content[member, layer, number - 1]
+                    _gather(total.reshape(total.size), line)
+                advance_field(padded, newer, older, source, rate, west, south, weights, work)
+                if gathers:
+                    total = flux_x[member, layer, number - 1]
+                    _gather(total.reshape(total.size), work[0])
+                    total = flux_y[member, layer, number - 1]
+                    _gather(total.reshape(total.size), work[1])
+                if number < tracers.shape[2]:
+                    padded, rate, weights = tracers[member, layer, number], decay, tracer_weights
+                    newer = tracers_newer[member, layer, number]
+                    older = tracers_older[member, layer, number]
+                    source = tracer_source[number]
