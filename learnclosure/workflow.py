@@ -53,13 +53,12 @@ def _sources_mark(study: Study, table: EnsembleTable) -> list[list[str | int]]:
 def _diagnose_region(study: Study, table: EnsembleTable) -> None:
     from learnclosure.diagnosis.artefact import write_statistics
     from learnclosure.diagnosis.diagnose import diagnose
-    from learnclosure.ensemble.averaging import averaged
     from learnclosure.ensemble.reader import open_ensemble
     from learnclosure.features.artefact import write_features
 
     places = artefacts(study)
     with open_ensemble(table, study.folder) as ensemble:
-        statistics = diagnose(averaged(ensemble, study.diagnosis), study.diagnosis)
+        statistics = diagnose(ensemble, study.diagnosis)
     write_statistics(statistics, places.statistics(table.name))
     write_features(statistics, places.features(table.name))
 

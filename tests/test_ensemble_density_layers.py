@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from pathlib import Path
 
 import gsw
 import numpy as np
 import pytest
+import xarray as xr
 
 from diagnosis_cases import box, random_ensemble
 from ensemble_cases import write_classic
@@ -16,7 +18,14 @@ from learnclosure.ensemble.density_layers import DensityLayers
 from learnclosure.ensemble.layer_quantity import reference_pressure
 from learnclosure.ensemble.reader import open_ensemble
 from learnclosure.errors import GridError, RoleError, SourceError, StudyError, UnitError
-from learnclosure.study import DiagnosisSettings, EnsembleTable, LayerSettings, parse_study
+from learnclosure.study import (
+    DiagnosisSettings,
+    EnsembleTable,
+    LayerSettings,
+    parse_study,
+    read_study,
+)
+from learnclosure.workflow import diagnose_study
 
 EDGES = (20.0, 10.0, 5.0)
 
@@ -448,3 +457,26 @@ def test_weights_need_layers_and_a_thickness():
         averaged(random_ensemble(box(2, 4, 5)), weighted())
     with pytest.raises(StudyError, match="thickness-weighted averages need layers"):
         averaged(level_ensemble(), weighted())
+
+
+FOREIGN = Path(__file__).parent.parent / "experiments" / "foreign_fixture" / "study.toml"
+
+
+def test_a_study_with_layers_is_diagnosed_on_them(tmp_path):
+    study = read_study(FOREIGN)
+    settings = DiagnosisSettings(layers={"count": 3, "reference_pressure": "0 dbar"})
+    changed = study.model_copy(update={"output": tmp_path, "diagnosis": settings})
+    diagnose_study(changed, workers=1)
+    with xr.open_dataset(tmp_path / "headland" / "statistics.nc") as statistics:
+        assert statistics.attrs["vertical"] == "layers"
+        assert "thickness-weighted average in each layer" in statistics.attrs["eddy_definition"]
+        assert "layers by density" in statistics.attrs["layer_quantity"]
+        assert len(np.atleast_1d(statistics.attrs["layer_edges"])) == 2
+        assert "edges of layers chosen for equal volumes" in statistics.attrs["assumptions"]
+        share = statistics["valid_share"].values
+        thickness = statistics["layer_thickness"].values
+        assert share.shape == thickness.shape
+        assert ((share >= 0.0) & (share <= 1.0)).all()
+        assert (share[thickness > 0.0] >= 0.5).all()
+        sloping = np.isfinite(statistics["isoneutral_slope_x"].values)
+        np.testing.assert_array_equal(sloping, statistics["wet_share"].values > 0.0)

@@ -184,8 +184,9 @@ def add_depth_axes(
         If there is an upward velocity but fewer than three tracers.
     """
     slopes = _slopes(source, coarsening, whole)
-    for axis, values in zip("xy", slopes, strict=True):
-        builder.add_named(f"isoneutral_slope_{axis}", values)
+    if slopes is not None:
+        for axis, values in zip("xy", slopes, strict=True):
+            builder.add_named(f"isoneutral_slope_{axis}", values)
     if source.grid.vertical != "levels" or "z_velocity" not in whole.mean:
         return
     found = diagnose_depth_tensor(source, coarsening, whole, gradients, settings.smoothing_length)
@@ -193,7 +194,9 @@ def add_depth_axes(
         builder.add_named(f"depth_tensor_{pair}", found.smooth[..., a, b])
         builder.add_named(f"least_squares_depth_tensor_{pair}", found.least_squares[..., a, b])
     builder.add_named("depth_condition_number", found.condition)
-    builder.add_named("skew_diffusivity", isoneutral_parts(found.smooth, slopes).skew_diffusivity)
+    if slopes is not None:
+        parts = isoneutral_parts(found.smooth, slopes)
+        builder.add_named("skew_diffusivity", parts.skew_diffusivity)
     for name in (*source.tracers, *source.withheld_tracers):
         units = source.units.get(name, "1")
         builder.add(
@@ -207,7 +210,10 @@ def add_depth_axes(
         )  # fmt: skip
 
 
-def _slopes(source: EnsembleSource, coarsening: Coarsening, whole: GroupMoments) -> FloatArray:
+def _slopes(
+    source: EnsembleSource, coarsening: Coarsening, whole: GroupMoments
+) -> FloatArray | None:
+    """Slopes of layers, or of surfaces of equal buoyancy where it is known."""
     geometry = coarsening.geometry
     thickness = coarsening.mean(source.grid.layer_thickness)
     if source.grid.vertical == "layers":
@@ -215,7 +221,7 @@ def _slopes(source: EnsembleSource, coarsening: Coarsening, whole: GroupMoments)
         depth = coarsening.mean(np.broadcast_to(source.grid.sea_floor_depth, shape)).max(axis=0)
         return slopes_of_layers(thickness, depth, geometry)
     if "buoyancy" not in whole.mean:
-        return np.full((2, *geometry.mask.shape), np.nan)
+        return None
     return slopes_from_buoyancy(whole.mean["buoyancy"], thickness, geometry)
 
 

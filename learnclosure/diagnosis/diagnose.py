@@ -30,6 +30,7 @@ from learnclosure.diagnosis.tensor import (
     scalar_diffusivity,
     symmetric_parts,
 )
+from learnclosure.ensemble.averaging import averaged
 from learnclosure.errors import DiagnosisError
 from learnclosure.study import DiagnosisSettings
 
@@ -65,6 +66,7 @@ def diagnose(
     """
     chosen = settings or DiagnosisSettings()
     _check_tracers(ensemble)
+    ensemble = averaged(ensemble, chosen)
     report = progress or (lambda _share, _note: None)
     coarsening = Coarsening(ensemble.grid, chosen.coarsen)
     geometry = coarsening.geometry

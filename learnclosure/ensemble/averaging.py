@@ -125,7 +125,11 @@ class ThicknessWeighted:
 
     def _notes(self) -> list[str]:
         mask = self.grid.geometry.mask
-        return [
+        left_out = getattr(self._source, "left_out_gradients", {}).get("thickness")
+        notes = []
+        if left_out is not None and np.any(left_out):
+            notes.append("weights lack the uniform gradient that the thickness leaves out")
+        return notes + [
             f"layer {layer} outcrops: at the times looked at it is there in "
             f"{float(share[wet].mean()):.1%} of members and times on average and in "
             f"{float(share[wet].min()):.1%} at least"

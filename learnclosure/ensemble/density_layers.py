@@ -69,6 +69,8 @@ class DensityLayers:
     valid_share : ndarray, shape (layer, y, x)
         Share of members and times in which the layer is there; it outcrops in the rest.
     weighted : bool
+    active : tuple of str
+        The thickness: what else acts on the flow is bound to levels.
     grid : Grid
         Layers with their mean thickness; land where a layer is too thin or too rare.
 
@@ -99,7 +101,7 @@ class DensityLayers:
         self.name, self.split = source.name, source.split
         self.member_labels, self.times = source.member_labels, source.times
         self.tracers, self.withheld_tracers = source.tracers, source.withheld_tracers
-        self.active = tuple(dict.fromkeys((*getattr(source, "active", ()), "thickness")))
+        self.active: tuple[str, ...] = ("thickness",)
         self._quantity = layer_quantity(source, settings)
         # All that follows lets the quantity grow downward.
         self._sign = 1.0 if self._grows_downward() else -1.0
