@@ -307,3 +307,47 @@ def test_fluxes_down_the_gradient():
     flux = down_gradient_3d(tensor, spread(TRACERS, grid))
     np.testing.assert_allclose(flux[:, :, 1, 1, 1], -(TRACERS @ TRUE.T))
     assert (flux[:, :, 0, 0, 0] == 0.0).all()
+
+
+def deep_water_waves(grid, *, height, wavelength, members=8):
+    """Members at evenly spread phases of one wave, tracers displaced by it to first order."""
+    wavenumber = 2.0 * np.pi / wavelength
+    frequency = np.sqrt(9.81 * wavenumber)
+    z = -(np.cumsum(grid.layer_thickness, axis=0) - 0.5 * grid.layer_thickness)
+    phase = (2.0 * np.pi * np.arange(members) / members)[None, :, None, None, None]
+    size = height * np.exp(wavenumber * z)
+    still = np.zeros((1, members, *grid.shape))
+    moved = np.stack([-size * np.sin(phase), still, size * np.cos(phase)])
+    values = {
+        "x_velocity": frequency * size * np.cos(phase),
+        "y_velocity": still,
+        "z_velocity": frequency * size * np.sin(phase),
+        "buoyancy": still + 1e-4 * z,
+    }
+    for letter, gradient in zip("abcd", TRACERS * [1e6, 1e6, 1e3], strict=True):
+        place = (grid.x, grid.y[:, None], z)
+        values[f"dye_{letter}"] = sum(
+            slope * (at - shift) for slope, at, shift in zip(gradient, place, moved, strict=True)
+        )
+    return MemoryEnsemble(grid, values, ("dye_a", "dye_b", "dye_c", "dye_d")), frequency * size**2
+
+
+def test_the_antisymmetric_tensor_of_a_deep_water_wave_carries_its_stokes_drift():
+    # Plumb 1979, J. Atmos. Sci. 36, 1699-1704 (from memory): K_xz = a^2 w exp(2 k z)/2 = -K_zx,
+    # nothing else, and u_S = d_z K_xz = a^2 w k exp(2 k z), .0493292 m/s at the surface for
+    # a = 1 m, 100 m long, g = 9.81 (worked from the formula).
+    members = 8
+    grid = level_grid(3, 4, thickness=np.full(20, 1.0))
+    ensemble, squared = deep_water_waves(grid, height=1.0, wavelength=100.0, members=members)
+    statistics = diagnose(ensemble, PLAIN)
+    unbiased = members / (members - 1)
+    expected = 0.5 * unbiased * squared
+    for pair, sign in (("xz", 1.0), ("zx", -1.0), ("xx", 0.0), ("zz", 0.0), ("yy", 0.0)):
+        found = statistics[f"least_squares_depth_tensor_{pair}"].values
+        np.testing.assert_allclose(found, sign * expected, rtol=1e-6, atol=1e-6)
+    across = statistics["least_squares_depth_tensor_xz"].values / unbiased
+    drift = vertical_gradient(across, grid.layer_thickness, grid.geometry.mask)[1:-1, 0, 0]
+    z = -(np.arange(1, 19) + 0.5)
+    surface = 0.0493292
+    # Second-order differences of an exponential err by (2 k dz)^2/6 = .26 %.
+    np.testing.assert_allclose(drift, surface * np.exp(4.0 * np.pi / 100.0 * z), rtol=3.5e-3)

@@ -120,6 +120,14 @@ def test_what_stands_on_land_does_not_invert_a_column():
     assert not inverted_columns(quantity, thickness).any()
 
 
+def test_water_that_ends_at_an_edge_leaves_nothing_beyond_it():
+    quantity, thickness = column(1.0, 2.0, 3.0), column(10.0, 10.0, 10.0)
+    _, found = to_layers(quantity[None], quantity, thickness, np.array([1.5, 2.5, 3.5]))
+    np.testing.assert_array_equal(found.ravel(), [10.0, 10.0, 10.0, 0.0])
+    _, found = to_layers(quantity[None], quantity, thickness, np.array([-1.0, 1.0, 2.5]))
+    np.testing.assert_array_equal(found.ravel(), [0.0, 0.0, 20.0, 10.0])
+
+
 def test_layers_that_are_not_there_are_zero_not_filled():
     quantity, thickness = column(1.0, 2.0), column(10.0, 10.0)
     means, found = to_layers(np.ones((1, 2, 1, 1)), quantity, thickness, np.array([-1.0, 5.0]))

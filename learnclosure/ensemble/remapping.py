@@ -73,7 +73,7 @@ def _hand_out(
     """
     done, here = 0.0, low
     for layer in range(first, last + 1):
-        share = 1.0 - done
+        share = max(1.0 - done, 0.0)
         if layer < last:
             share = (edges[layer] - here) / (high - low)
             here = edges[layer]
@@ -173,6 +173,9 @@ def remap_columns(
                     reach = -face if other < here else face
                     first = _layer_of(low, edges, last)
                     last = _layer_of(high, edges, first)
+                    if last > first and edges[last - 1] == high and low < high:
+                        # The half ends at the edge: no water lies beyond it.
+                        last -= 1
                     _hand_out(
                         low,
                         high,
