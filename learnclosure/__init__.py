@@ -33,6 +33,7 @@ if TYPE_CHECKING:
     from learnclosure.ensemble.readiness import inspect_ensemble
     from learnclosure.errors import CheckFailedError, InputError, LearnclosureError
     from learnclosure.export.bundle import export_bundle
+    from learnclosure.export.compare import compare_bundles
     from learnclosure.export.gate import verify_bundle
     from learnclosure.export.graph import build_graph
     from learnclosure.export.predictor import load_predictor, predict_file
@@ -60,6 +61,7 @@ _HOMES = {
     "compute_inputs": "features.inputs",
     "diagnose": "diagnosis.diagnose",
     "evaluate": "validation.evaluation",
+    "compare_bundles": "export.compare",
     "export_bundle": "export.bundle",
     "inspect_ensemble": "ensemble.readiness",
     "load_predictor": "export.predictor",
@@ -89,6 +91,7 @@ __all__ = [
     "Table",
     "__version__",
     "build_graph",
+    "compare_bundles",
     "compute_inputs",
     "diagnose",
     "evaluate",

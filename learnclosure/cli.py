@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
+import json
 import sys
 from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import click
 from rich.console import Console
@@ -19,7 +20,6 @@ from rich.progress import (
     TimeElapsedColumn,
     TimeRemainingColumn,
 )
-from rich.table import Table
 
 from learnclosure import __version__
 from learnclosure.errors import CheckFailedError, InputError, LearnclosureError
@@ -145,8 +145,19 @@ def simulate(
 @commands.command(epilog=_example("learnclosure inspect study.toml"))
 @click.argument("study_file", metavar="STUDY", type=click.Path(path_type=Path), required=False)
 @click.option("--features", is_flag=True, help="List the features a closure may use and stop.")
-def inspect(study_file: Path | None, features: bool) -> None:
-    """Say what was understood of each ensemble and whether the STUDY can run."""
+@click.option(
+    "--target-error",
+    type=click.FloatRange(0.0, 1.0, min_open=True),
+    default=0.2,
+    show_default=True,
+    help="Relative error of the tensor's trace that members are counted for.",
+)
+@click.option("--json", "as_json", is_flag=True, help="Print JSON for other programs.")
+def inspect(study_file: Path | None, features: bool, target_error: float, as_json: bool) -> None:
+    """Say what was understood of each ensemble, what its diagnosis will cost and promise.
+
+    Everything that keeps the STUDY from running is listed.
+    """
     from learnclosure import listing
 
     if features:
@@ -154,23 +165,30 @@ def inspect(study_file: Path | None, features: bool) -> None:
         return
     if study_file is None:
         raise click.UsageError("give a STUDY, or --features")
-    from learnclosure.ensemble.readiness import inspect_ensemble
+    from learnclosure.inspection import inspect_study
     from learnclosure.study import read_study
 
     study = read_study(study_file)
     problems: list[str] = []
-    for table in study.ensembles:
-        readiness = inspect_ensemble(table, study.folder)
-        for part in listing.readiness_listing(readiness):
+    found: list[dict[str, Any]] = []
+    for inspection in inspect_study(study, target_error=target_error):
+        problems += inspection.readiness.problems
+        if as_json:
+            found.append(inspection.as_dict())
+            continue
+        for part in listing.readiness_listing(inspection.readiness, inspection.plan):
             console.print(part)
-        problems += readiness.problems
+    if as_json:
+        record = {"study": str(study_file), "ready": not problems, "ensembles": found}
+        click.echo(json.dumps(record, indent=1, allow_nan=False))
     if problems:
         raise InputError(
             f"the study cannot run: {len(problems)} problem(s), first: {problems[0]}",
             where=study_file,
             remedy="correct what is listed above",
         )
-    console.print(f"{study_file}: the study can run", markup=False, soft_wrap=True)
+    if not as_json:
+        console.print(f"{study_file}: the study can run", markup=False, soft_wrap=True)
 
 
 @commands.command(epilog=_example("learnclosure diagnose study.toml --workers 2"))
@@ -225,7 +243,7 @@ def _require_audit(record: dict[str, object], path: Path) -> None:
     failed = failed_checks(record)
     if failed:
         raise CheckFailedError(
-            f"the audit failed: {'; '.join(failed)}",
+            f"the audit failed: {', '.join(failed)}",
             where=path,
             remedy="do not ship this closure; see the audit table in the report",
         )
@@ -233,17 +251,19 @@ def _require_audit(record: dict[str, object], path: Path) -> None:
 
 @commands.command(epilog=_example("learnclosure export study.toml"))
 @STUDY
-def export(study_file: Path) -> None:
+@click.option("--archive", is_flag=True, help="Write each bundle as one .zip file as well.")
+def export(study_file: Path, archive: bool) -> None:
     """Write a verified bundle for each trained family."""
-    from learnclosure.delivery import export_study
+    from learnclosure.delivery import archive_study, export_study
     from learnclosure.study import read_study
     from learnclosure.workflow import artefacts
 
     study = read_study(study_file)
     with progress_bars() as progress:
         export_study(study, progress=progress)
-    for family in study.closure.families:
-        console.print(str(artefacts(study).bundle(family)), markup=False, soft_wrap=True)
+    places = [artefacts(study).bundle(family) for family in study.closure.families]
+    for path in (*places, *(archive_study(study) if archive else ())):
+        console.print(str(path), markup=False, soft_wrap=True)
 
 
 @commands.command(epilog=_example("learnclosure report study.toml"))
@@ -277,27 +297,52 @@ def run(study_file: Path, workers: int) -> None:
     _require_audit(read_json(places.evaluation, "run the study again"), places.evaluation)
 
 
+SIGNERS = click.option(
+    "--signers",
+    type=click.Path(path_type=Path),
+    help="File of allowed signers (OpenSSH); the bundle must be signed by one of them.",
+)
+JSON = click.option("--json", "as_json", is_flag=True, help="Print JSON instead of tables.")
+
+
+def _print_json(record: object) -> None:
+    console.print(json.dumps(record, indent=1), markup=False, soft_wrap=True)
+
+
 @commands.command(epilog=_example("learnclosure verify results/bundle/local-energy"))
-@click.argument("bundle", type=click.Path(path_type=Path))
-def verify(bundle: Path) -> None:
-    """Check a BUNDLE: sums, graph, declared inputs, reference outputs."""
+@click.argument("bundle", type=click.Path(path_type=Path), required=False)
+@click.option("--rules", is_flag=True, help="List the rules a bundle is held to and stop.")
+@SIGNERS
+@JSON
+def verify(bundle: Path | None, rules: bool, signers: Path | None, as_json: bool) -> None:
+    """Check a BUNDLE, folder or archive: sums, graph, declared inputs, reference outputs."""
+    from learnclosure import listing
+
+    if rules:
+        console.print(listing.rule_listing())
+        return
+    if bundle is None:
+        raise click.MissingParameter(param_hint="'BUNDLE'", param_type="argument")
     from learnclosure.export.gate import verify_bundle
 
-    outcome = verify_bundle(bundle)
-    table = Table(title=str(bundle), title_justify="left")
-    for heading in ("check", "result", "found"):
-        table.add_column(heading, overflow="fold")
-    for check in outcome.checks:
-        table.add_row(check.name, "passed" if check.passed else "FAILED", check.found)
-    console.print(table)
-    failed = [check.name for check in outcome.checks if not check.passed]
+    outcome = verify_bundle(bundle, signers=signers)
+    if as_json:
+        _print_json({"passed": outcome.passed, "checks": [vars(each) for each in outcome.checks]})
+    else:
+        console.print(listing.verification_listing(outcome))
+    failed = [
+        f"{check.name} by rule {check.rule}" if check.rule else check.name
+        for check in outcome.checks
+        if not check.passed
+    ]
     if failed:
         raise CheckFailedError(
             f"the bundle failed: {', '.join(failed)}",
             where=bundle,
             remedy="do not load it; ask its author for an intact copy",
         )
-    console.print(f"{bundle}: verified", markup=False, soft_wrap=True)
+    if not as_json:
+        console.print(f"{bundle}: verified", markup=False, soft_wrap=True)
 
 
 @commands.command(
@@ -306,12 +351,42 @@ def verify(bundle: Path) -> None:
 @click.argument("bundle", type=click.Path(path_type=Path))
 @click.argument("source", metavar="IN", type=click.Path(path_type=Path))
 @click.argument("target", metavar="OUT", type=click.Path(path_type=Path))
-def predict(bundle: Path, source: Path, target: Path) -> None:
+@click.option("--single", is_flag=True, help="Run the variant in single precision.")
+@SIGNERS
+def predict(bundle: Path, source: Path, target: Path, single: bool, signers: Path | None) -> None:
     """Apply a BUNDLE to the mean fields in IN and write the tensor to OUT."""
     from learnclosure.export.predictor import predict_file
 
-    predict_file(bundle, source, target)
+    predict_file(bundle, source, target, single=single, signers=signers)
     console.print(str(target), markup=False, soft_wrap=True)
+
+
+@commands.command(epilog=_example("learnclosure compare old/mean-field new/mean-field"))
+@click.argument("first", metavar="A", type=click.Path(path_type=Path))
+@click.argument("second", metavar="B", type=click.Path(path_type=Path))
+@JSON
+def compare(first: Path, second: Path, as_json: bool) -> None:
+    """Tell the bundles A and B apart: inputs, ranges, scores, outputs, speed.
+
+    Ends with 0 if they compute and claim the same but for rounding, else with 1; labels such
+    as the version, and speed, do not count.
+    """
+    from learnclosure import listing
+    from learnclosure.export.compare import TOPICS, compare_bundles
+
+    comparison = compare_bundles(first, second)
+    if as_json:
+        _print_json(comparison.as_record())
+    else:
+        for part in listing.comparison_listing(comparison):
+            console.print(part)
+    if comparison.differs:
+        met = {row.topic for row in comparison.differences}
+        topics = [topic for topic in TOPICS if topic in met and topic != "label"]
+        raise CheckFailedError(
+            f"the bundles differ in {', '.join(f'{topic}s' for topic in topics)}",
+            where=f"{first}, {second}",
+        )
 
 
 def main(arguments: list[str] | None = None) -> None:

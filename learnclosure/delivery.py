@@ -12,6 +12,7 @@ import numpy as np
 import numpy.typing as npt
 
 from learnclosure import __version__
+from learnclosure.export.layout import SIGNATURE_FILE
 from learnclosure.stages import file_digest, fingerprint
 from learnclosure.study import Study
 from learnclosure.workflow import (
@@ -132,6 +133,8 @@ def provenance(study: Study, statistics: Mapping[str, xr.Dataset]) -> dict[str, 
                 "members": int(dataset.attrs["members"]),
                 "snapshots": int(dataset.attrs["snapshots"]),
                 "eddy_definition": str(dataset.attrs["eddy_definition"]),
+                "layers": int(dataset.sizes["layer"]),
+                "cell_width": float(np.median(dataset["cell_width_x"].values)),
                 "input_sha256": str(dataset.attrs.get("input_sha256", "")),
                 "statistics_sha256": file_digest(places.statistics(name)),
             }
@@ -152,7 +155,10 @@ def provenance(study: Study, statistics: Mapping[str, xr.Dataset]) -> dict[str, 
 
 
 def _bundle_files(folder: Path) -> list[Path]:
-    return sorted(path for path in folder.rglob("*") if path.is_file())
+    """Return what an export wrote; a signature comes later and from elsewhere."""
+    return sorted(
+        path for path in folder.rglob("*") if path.is_file() and path.name != SIGNATURE_FILE
+    )
 
 
 def export_study(study: Study, *, progress: Progress = silent) -> None:
@@ -217,6 +223,38 @@ def _export_families(
         )
         places.note(f"export-{family}", mark, _bundle_files(folder))
         progress(f"export {family}", 1.0, "done")
+
+
+def archive_study(study: Study) -> list[Path]:
+    """Pack the bundle of each family as one file beside its folder.
+
+    Parameters
+    ----------
+    study : Study
+
+    Returns
+    -------
+    list of Path
+        The archives, named after bundle and version.
+
+    Raises
+    ------
+    BundleError
+        If a bundle is missing or does not pass its gate.
+    OutputError
+        If an archive cannot be written.
+    """
+    from learnclosure.export.archive import write_archive
+    from learnclosure.export.gate import load_bundle
+
+    written = []
+    for family in study.closure.families:
+        folder = artefacts(study).bundle(family)
+        contents = load_bundle(folder)
+        name, version = contents.manifest["name"], contents.manifest["version"]
+        written.append(folder.with_name(f"{name}-{version}.zip"))
+        write_archive(contents.files, written[-1])
+    return written
 
 
 def report_study(study: Study, *, progress: Progress = silent) -> Path:

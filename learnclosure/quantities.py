@@ -16,82 +16,35 @@ Locality says what a host must have at hand to compute the value: ``point``,
 
 from __future__ import annotations
 
-from collections.abc import Iterable
-from dataclasses import dataclass
-from typing import Literal
+from learnclosure.feature_quantities import FEATURES
+from learnclosure.input_quantities import INPUTS
+from learnclosure.quantity import (
+    INTERFACE_FIELD,
+    LAYER_FIELD,
+    SURFACE_FIELD,
+    Group,
+    Locality,
+    Parity,
+    Quantity,
+)
+from learnclosure.quantity import rows as _rows
 
-Parity = Literal["scalar", "pseudo-scalar", "vector", "pseudo-vector", "tensor"]
-Locality = Literal["point", "stencil 1", "stencil 2", "column", "along-jet", "domain"]
-Group = Literal["role", "mean state", "statistic", "input", "feature", "output"]
-
-LAYER_FIELD = ("layer", "y", "x")
-SURFACE_FIELD = ("y", "x")
-INTERFACE_FIELD = ("interface", "y", "x")
-
-
-@dataclass(frozen=True, slots=True)
-class Quantity:
-    """One row of the table.
-
-    Attributes
-    ----------
-    name : str
-        Identifier in artefacts, graph inputs and Python.
-    symbol : str
-        Usual symbol in plain text.
-    units : str
-        SI units in UDUNITS spelling; ``1`` for a pure number.
-    long_name : str
-        NetCDF ``long_name``.
-    group : str
-        Where in the work it belongs; see ``Group``.
-    standard_name : str or None
-        CF standard name where one exists.
-    dims : tuple of str
-        Dimensions it has in artefacts.
-    parity : str
-        Behaviour under reflection.
-    locality : str
-        What a host needs to compute it.
-    energy : bool
-        True where it needs eddy energy and so only serves hosts that carry it.
-    validity : str
-        Where it is defined; what stands in elsewhere.
-    source : str
-        Published source of the definition.
-    """
-
-    name: str
-    symbol: str
-    units: str
-    long_name: str
-    group: Group
-    standard_name: str | None = None
-    dims: tuple[str, ...] = LAYER_FIELD
-    parity: Parity = "scalar"
-    locality: Locality = "point"
-    energy: bool = False
-    validity: str = ""
-    source: str = ""
-
-    def attributes(self) -> dict[str, str]:
-        """Return the CF attributes a NetCDF variable of this quantity carries."""
-        attributes = {"long_name": self.long_name, "units": self.units}
-        if self.standard_name is not None:
-            attributes["standard_name"] = self.standard_name
-        return attributes
-
-
-def _rows(group: Group, rows: Iterable[Quantity]) -> dict[str, Quantity]:
-    table: dict[str, Quantity] = {}
-    for row in rows:
-        if row.group != group:
-            raise AssertionError(f"row {row.name} stands in the wrong group")
-        if row.name in table:
-            raise AssertionError(f"row {row.name} stands twice")
-        table[row.name] = row
-    return table
-
+__all__ = [
+    "FEATURES",
+    "INPUTS",
+    "INTERFACE_FIELD",
+    "LAYER_FIELD",
+    "MEAN_STATE",
+    "OUTPUTS",
+    "ROLES",
+    "STATISTICS",
+    "SURFACE_FIELD",
+    "TENSOR_COMPONENTS",
+    "Group",
+    "Locality",
+    "Parity",
+    "Quantity",
+]
 
 ROLES: dict[str, Quantity] = _rows(
     "role",
@@ -271,202 +224,6 @@ DEPTH_STATISTICS: dict[str, Quantity] = _rows(
     ],
 )  # fmt: skip
 """Statistics only some ensembles allow: of levels with upward velocity and of layers."""
-
-INPUTS: dict[str, Quantity] = _rows(
-    "input",
-    [
-        Quantity("x_velocity", "u", "m s-1", "mean velocity along x", "input",
-                 "sea_water_x_velocity", parity="vector"),
-        Quantity("y_velocity", "v", "m s-1", "mean velocity along y", "input",
-                 "sea_water_y_velocity", parity="vector"),
-        *(
-            Quantity(
-                f"velocity_gradient_{row}{column}", f"d{component}/d{column}", "s-1",
-                f"gradient along {column} of the mean velocity along {row}", "input",
-                parity="tensor", locality="stencil 1",
-            )
-            for row, component in (("x", "u"), ("y", "v"))
-            for column in "xy"
-        ),
-        *(
-            Quantity(
-                f"shear_{axis}", f"d{axis}u", "m s-1",
-                f"mean velocity along {axis} above minus below the interfaces of the layer",
-                "input", parity="vector", locality="column",
-                validity="zero for a single layer",
-            )
-            for axis in "xy"
-        ),
-        *(
-            Quantity(
-                f"pv_gradient_{axis}", f"dq/d{axis}", "m-1 s-1",
-                f"gradient along {axis} of quasi-geostrophic potential vorticity", "input",
-                parity="pseudo-vector", locality="stencil 2",
-                validity="neutral interfaces count as N2 = 1e-8 s-2",
-                source="Pedlosky 1987, Geophysical Fluid Dynamics, section 6.16 (from memory)",
-            )
-            for axis in "xy"
-        ),
-        *(
-            Quantity(
-                f"planetary_beta_{axis}", f"df/d{axis}", "m-1 s-1",
-                f"gradient along {axis} of the Coriolis parameter", "input",
-                parity="pseudo-vector",
-            )
-            for axis in "xy"
-        ),
-        *(
-            Quantity(
-                f"topographic_beta_{axis}", f"-f/D dD/d{axis}", "m-1 s-1",
-                f"topographic beta along {axis} of the whole column", "input",
-                parity="pseudo-vector", locality="stencil 1",
-                source="Rhines 1969, J. Fluid Mech. 37, 161-189 (from memory)",
-            )
-            for axis in "xy"
-        ),
-        Quantity("coriolis_parameter", "f", "s-1", "Coriolis parameter", "input",
-                 "coriolis_parameter", parity="pseudo-scalar"),
-        Quantity(
-            "deformation_radius", "Ld", "m", "first baroclinic deformation radius", "input",
-            locality="column",
-            validity="between 1 and 500 km; sqrt(c/(2 beta)) near the equator",
-            source="Chelton et al. 1998, J. Phys. Oceanogr. 28, 433-460",
-        ),
-        Quantity(
-            "eady_growth_rate", "sigma", "s-1", "Eady growth rate of the column", "input",
-            locality="column", validity="zero for a single layer",
-            source="Eady 1949, Tellus 1, 33-52: 0.3098 f U_z / N",
-        ),
-        Quantity(
-            "charney_green_number", "gamma", "1", "Charney-Green number beta N2 H / (f2 U_z)",
-            "input", locality="column", validity="at most 100, also without shear",
-            source="Green 1960, Q. J. R. Meteorol. Soc. 86, 237-251 (from memory)",
-        ),
-        Quantity(
-            "jet_distance", "d/W", "1",
-            "distance from the jet axis in jet widths, positive to the left of the flow",
-            "input", parity="pseudo-scalar", locality="along-jet",
-            validity="between -10 and 10; zero where there is no jet",
-        ),
-        Quantity("jet_speed", "Uj", "m s-1", "speed on the jet axis", "input",
-                 locality="along-jet"),
-        Quantity("jet_width", "W", "m", "width of the jet, W of exp(-(d/W)^2)", "input",
-                 locality="along-jet"),
-        Quantity("layer_index", "k", "1", "number of the layer, zero at the top", "input"),
-        Quantity("depth_share", "z/D", "1",
-                 "depth of the middle of the layer over the depth of the column", "input",
-                 locality="column"),
-        Quantity("eddy_kinetic_energy", "EKE", "m2 s-2",
-                 "kinetic energy of the eddies per unit mass", "input", energy=True),
-        Quantity("eddy_kinetic_energy_column", "EKEc", "m2 s-2",
-                 "eddy kinetic energy per unit mass, mean over the column", "input",
-                 energy=True, locality="column"),
-        *(
-            Quantity(
-                f"eddy_energy_gradient_{axis}", f"d ln EKE/d{axis}", "m-1",
-                f"gradient along {axis} of the logarithm of eddy kinetic energy", "input",
-                parity="vector", energy=True, locality="stencil 1",
-                validity="eddy kinetic energy counts as at least 1e-8 m2 s-2",
-            )
-            for axis in "xy"
-        ),
-    ],
-)  # fmt: skip
-
-_DRIFT = "velocity over beta Ld2, the drift of long Rossby waves"
-
-FEATURES: dict[str, Quantity] = _rows(
-    "feature",
-    [
-        Quantity("speed", "|U|", "m s-1", "speed of the mean flow", "feature"),
-        Quantity("vertical_shear", "|dU|", "m s-1", "shear between layers", "feature",
-                 locality="column"),
-        Quantity("pv_gradient", "|grad q|", "m-1 s-1",
-                 "size of the potential vorticity gradient", "feature", locality="stencil 2"),
-        Quantity("deformation_radius", "Ld", "m", "first baroclinic deformation radius",
-                 "feature", locality="column",
-                 source="Chelton et al. 1998, J. Phys. Oceanogr. 28, 433-460"),
-        Quantity("eady_growth_rate", "sigma", "s-1", "Eady growth rate of the column",
-                 "feature", locality="column", source="Eady 1949, Tellus 1, 33-52"),
-        Quantity("eady_diffusivity", "sigma Ld2", "m2 s-1",
-                 "Eady growth rate times deformation radius squared", "feature",
-                 locality="column", source="Stone 1972, J. Atmos. Sci. 29, 405-418"),
-        Quantity("shear_diffusivity", "|dU| Ld", "m2 s-1",
-                 "shear between layers times deformation radius", "feature",
-                 locality="column"),
-        Quantity("flow_across_ratio", "Un/(beta Ld2)", "1",
-                 "flow along the potential vorticity gradient, " + _DRIFT, "feature"),
-        Quantity("flow_along_ratio", "Ut/(beta Ld2)", "1",
-                 "flow along potential vorticity contours, " + _DRIFT, "feature"),
-        Quantity("shear_across_ratio", "dUn/(beta Ld2)", "1",
-                 "shear along the potential vorticity gradient, " + _DRIFT, "feature",
-                 locality="column"),
-        Quantity("shear_along_ratio", "dUt/(beta Ld2)", "1",
-                 "shear along potential vorticity contours, " + _DRIFT, "feature",
-                 locality="column", source="criticality of Phillips 1954, Tellus 6, 273-286"),
-        Quantity("rossby_number", "zeta/f", "1", "relative vorticity over f", "feature",
-                 locality="stencil 1"),
-        Quantity("normal_strain_ratio", "sn/|f|", "1",
-                 "normal strain in the local frame over f", "feature", locality="stencil 1"),
-        Quantity("shear_strain_ratio", "ss/|f|", "1",
-                 "shear strain in the local frame over f", "feature", locality="stencil 1"),
-        Quantity("okubo_weiss_ratio", "OW/f2", "1", "Okubo-Weiss parameter over f squared",
-                 "feature", locality="stencil 1",
-                 source="Okubo 1970, Deep-Sea Res. 17, 445-454; Weiss 1991, Physica D 48, 273"),
-        Quantity("pv_gradient_ratio", "|grad q|/beta", "1",
-                 "potential vorticity gradient over planetary beta", "feature",
-                 locality="stencil 2"),
-        Quantity("planetary_beta_across", "beta_n/(|grad q| + beta)", "1",
-                 "planetary beta along grad q, over the sum of both sizes",
-                 "feature", locality="stencil 2"),
-        Quantity("planetary_beta_along", "beta_t/(|grad q| + beta)", "1",
-                 "planetary beta along contours of q, over the sum of both sizes",
-                 "feature", locality="stencil 2"),
-        Quantity("topographic_beta_across", "betaT_n/beta", "1",
-                 "topographic beta along the potential vorticity gradient, over planetary beta",
-                 "feature", locality="stencil 2"),
-        Quantity("topographic_beta_along", "betaT_t/beta", "1",
-                 "topographic beta along potential vorticity contours, over planetary beta",
-                 "feature", locality="stencil 2"),
-        Quantity("charney_green_number", "gamma", "1", "Charney-Green number", "feature",
-                 locality="column"),
-        Quantity("jet_distance", "d/W", "1",
-                 "signed distance from the jet axis in jet widths, mirrored in the south",
-                 "feature", locality="along-jet"),
-        Quantity("jet_width_ratio", "W/Ld", "1", "jet width over deformation radius",
-                 "feature", locality="along-jet"),
-        Quantity("jet_speed_ratio", "Uj/(beta Ld2)", "1", "jet speed, " + _DRIFT, "feature",
-                 locality="along-jet"),
-        Quantity("layer_index", "k", "1", "number of the layer, zero at the top", "feature"),
-        Quantity("depth_share", "z/D", "1",
-                 "depth of the middle of the layer over the depth of the column", "feature",
-                 locality="column"),
-        Quantity("eddy_speed_share", "ue/uc", "1",
-                 "eddy speed of the layer over that of the column", "feature", energy=True),
-        Quantity("flow_across_eddy_ratio", "Un/ue", "1",
-                 "flow along the potential vorticity gradient over eddy speed", "feature",
-                 energy=True),
-        Quantity("flow_along_eddy_ratio", "Ut/ue", "1",
-                 "flow along potential vorticity contours over eddy speed", "feature",
-                 energy=True),
-        Quantity("eddy_energy_gradient_across", "Ld dn ln EKE", "1",
-                 "gradient of log eddy energy along that of potential vorticity, times Ld",
-                 "feature", energy=True, locality="stencil 2"),
-        Quantity("eddy_energy_gradient_along", "Ld dt ln EKE", "1",
-                 "gradient of log eddy energy along potential vorticity contours, times Ld",
-                 "feature", energy=True, locality="stencil 2"),
-        Quantity("rhines_length_ratio", "LR/Ld", "1",
-                 "Rhines length of the column over deformation radius", "feature", energy=True,
-                 locality="column", source="Rhines 1975, J. Fluid Mech. 69, 417-443"),
-        Quantity("eddy_rossby_number", "uc/(|f| Ld)", "1",
-                 "eddy speed of the column over f times deformation radius", "feature",
-                 energy=True, locality="column"),
-        Quantity("eady_growth_ratio", "sigma Ld/uc", "1",
-                 "Eady growth rate times deformation radius over eddy speed of the column",
-                 "feature", energy=True, locality="column"),
-    ],
-)  # fmt: skip
-
 
 TENSOR_COMPONENTS: tuple[str, ...] = tuple(
     f"transport_tensor_{row}{column}" for row in "xy" for column in "xy"

@@ -9,11 +9,21 @@ from __future__ import annotations
 import tomllib
 from itertools import pairwise
 from pathlib import Path
-from typing import Annotated, Literal
+from typing import Annotated, Literal, get_args
 
-from pydantic import BaseModel, ConfigDict, Field, ValidationError, model_validator
+from packaging.licenses import InvalidLicenseExpression, canonicalize_license_expression
+from pydantic import (
+    BaseModel,
+    ConfigDict,
+    Field,
+    ValidationError,
+    field_validator,
+    model_validator,
+)
 
 from learnclosure.errors import StudyError
+from learnclosure.features.frames import Frame
+from learnclosure.features.point_features import FeatureGroup
 
 Face = Literal["center", "east", "west", "north", "south", "top", "bottom"]
 Family = Literal["mean-field", "local-energy"]
@@ -24,6 +34,25 @@ GaugeBoundary = Literal["no-flux", "zero-potential", "least-flux"]
 
 RADIUS_OVER_SMOOTHING = 1.5
 """The tensor is kept smooth over two thirds of what eddies blur gradients over."""
+BaselineName = Literal[
+    "constant",
+    "eady-visbeck",
+    "eady-visbeck-published",
+    "stone",
+    "stone-published",
+    "held-larichev",
+    "held-larichev-published",
+    "eke-mixing-length",
+    "eke-mixing-length-published",
+    "bates",
+    "bates-published",
+    "ferrari-nikurashin",
+    "ferrari-nikurashin-published",
+    "energy-bounded",
+    "energy-bounded-published",
+    "constant-tuned",
+    "local-scalar",
+]
 
 
 class Section(BaseModel):
@@ -198,6 +227,13 @@ class DiagnosisSettings(Section):
     scalar_pull: float | None = Field(
         None, ge=0, description="pull to the local scalar fit; by default only for few tracers"
     )
+    ceiling_draws: int = Field(
+        4,
+        ge=0,
+        le=1000,
+        description="random pairs of halves for each number of members of the ceiling curves; "
+        "0 for no curves",
+    )
     flux: Literal["full", "divergent"] = Field(
         "full", description="invert the eddy fluxes or only their divergent parts"
     )
@@ -245,9 +281,14 @@ class DiagnosisSettings(Section):
 
 
 class FeatureSettings(Section):
-    """Which frame tensors and vectors are learned in."""
+    """What a closure sees of a point, and in which frame tensors and vectors are learned."""
 
-    frame: Literal["pv-gradient"] = Field("pv-gradient", description="local frame")
+    groups: tuple[FeatureGroup, ...] = Field(
+        ("standard",),
+        min_length=1,
+        description="features taken together: standard, or all of a kind of physics",
+    )
+    frame: Frame = Field("pv-gradient", description="local frame")
 
 
 class ClosureSettings(Section):
@@ -285,6 +326,9 @@ class ValidationSettings(Section):
     block_cells: int = Field(
         8, ge=1, description="side of a spatial block, coarse cells; less in small regions"
     )
+    baselines: tuple[BaselineName, ...] = Field(
+        get_args(BaselineName), description="classical closures scored beside the learned ones"
+    )
 
 
 class ExportSettings(Section):
@@ -292,9 +336,23 @@ class ExportSettings(Section):
 
     version: str = Field("0.1.0", pattern=r"^\d+\.\d+\.\d+$", description="version of the bundle")
     licence: str = Field("CC-BY-4.0", description="SPDX expression for the bundle")
+    citation: str = Field(
+        "", max_length=2000, description="how to cite the bundle; by name and version if empty"
+    )
+    single_precision: bool = Field(
+        True, description="ship a variant whose regressor computes in single precision"
+    )
     reference_points: int = Field(
         256, ge=8, le=100_000, description="points whose inputs and outputs ship for checking"
     )
+
+    @field_validator("licence")
+    @classmethod
+    def _spdx(cls, text: str) -> str:
+        try:
+            return str(canonicalize_license_expression(text))
+        except InvalidLicenseExpression:
+            raise ValueError("is no SPDX licence expression, such as CC-BY-4.0") from None
 
 
 class Study(Section):

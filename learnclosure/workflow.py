@@ -278,6 +278,7 @@ def _train_families(study: Study, pending: Mapping[str, str], progress: Progress
             study.closure,
             study.validation,
             progress=family_progress,
+            features=study.features,
         )
         with atomic_path(places.closure(family)) as temporary:
             joblib.dump(closure, temporary)

@@ -6,6 +6,7 @@ import numpy as np
 
 from learnclosure.ensemble.grid import Geometry
 from learnclosure.features.mean_state import MeanState
+from learnclosure.quantities import INPUTS
 
 
 def mean_state(
@@ -66,3 +67,28 @@ def coordinates(state):
     rows, columns = state.geometry.dx.shape
     y, x = np.mgrid[0:rows, 0:columns] * state.geometry.dx[0, 0]
     return x, y
+
+
+def random_inputs(seed, count=40):
+    """Make inputs of points at random, of the sizes they have in the ocean."""
+    random = np.random.default_rng(seed)
+    inputs = {name: random.normal(size=count) for name in INPUTS}
+    for name in inputs:
+        if name.startswith(("pv_gradient_x", "pv_gradient_y", "planetary_beta")):
+            inputs[name] *= 2e-11
+        if name.startswith(("topographic_beta", "vorticity_gradient")):
+            inputs[name] *= 2e-11
+        if name.startswith("velocity_gradient"):
+            inputs[name] *= 1e-6
+        if name.startswith("shear_rate"):
+            inputs[name] *= 1e-5
+    inputs["coriolis_parameter"] *= 1e-4
+    for name, size in (
+        ("deformation_radius", 3e4), ("jet_width", 8e4), ("eddy_kinetic_energy", 0.05),
+        ("eddy_kinetic_energy_column", 0.02), ("eady_growth_rate", 1e-6), ("jet_speed", 0.4),
+        ("axis_width", 8e4), ("axis_speed", 0.4), ("buoyancy_frequency_squared", 4e-6),
+        ("land_distance", 1e5), ("cell_width", 3e4), ("second_deformation_radius", 1e4),
+        ("wkb_deformation_radius", 3e4),
+    ):  # fmt: skip
+        inputs[name] = np.abs(inputs[name]) * size + 0.1 * size
+    return inputs

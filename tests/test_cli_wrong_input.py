@@ -158,7 +158,7 @@ def test_a_wrong_word_on_the_command_line_ends_with_2(capsys):
 
 def test_the_program_runs_as_a_command_and_every_help_gives_an_example():
     for command in ("demo", "simulate", "inspect", "diagnose", "train", "evaluate", "export",
-                    "run", "verify", "predict", "report"):  # fmt: skip
+                    "run", "verify", "predict", "compare", "report"):  # fmt: skip
         words = [sys.executable, "-c", "from learnclosure.cli import main; main()", command, "-h"]
         done = subprocess.run(words, capture_output=True, text=True, check=True)
         assert f"Example: learnclosure {command}" in " ".join(done.stdout.split())

@@ -34,7 +34,6 @@ def test_eady_visbeck_takes_the_growth_rate_without_its_factor() -> None:
     inputs = {
         "layer_index": np.array([0.0]),
         "eady_growth_rate": np.array([EADY_FACTOR * 2.5e-6]),
-        "deformation_radius": np.array([30e3]),
         "jet_width": np.array([100e3]),
     }
     assert baseline.diffusivity(np, inputs)[0] == pytest.approx(375.0, rel=1e-12)

@@ -79,7 +79,7 @@ def test_gradients_closer_than_the_limit_have_no_tensor_of_their_own(degrees, co
     assert np.isnan(found).all()
     random = np.random.default_rng(1)
     u = random.normal(size=(1, 6)) + 1j * random.normal(size=(1, 6))
-    ensemble = uniform_eddies(box(), u, u, np.vstack([gradients.T, gradients.T[:1]]))
+    ensemble = uniform_eddies(box(), u, u, np.vstack([gradients.T, 2.0 * gradients.T[:1]]))
     with pytest.raises(DiagnosisError, match="parallel or vanish everywhere"):
         diagnose(ensemble, DiagnosisSettings(coarsen=1))
 

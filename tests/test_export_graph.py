@@ -3,6 +3,7 @@ import onnx
 import pytest
 
 from export_cases import closure, evaluate_twice, table
+from learnclosure.closures.pointwise import UNBOUNDED, Outputs, flagged
 from learnclosure.export.graph import build_graph
 from learnclosure.export.reference import largest_difference, with_tails
 from learnclosure.export.runtime import open_session, run_session
@@ -95,3 +96,45 @@ def test_equal_closures_give_equal_bytes():
     first = build_graph(closure("local-energy", "trees-and-mlp"))
     second = build_graph(closure("local-energy", "trees-and-mlp"))
     assert first.SerializeToString() == second.SerializeToString()
+
+
+@pytest.mark.parametrize("value", [np.nan, np.inf, -np.inf, 1e300])
+@pytest.mark.parametrize("case", [CASES[0], CASES[3]], ids="/".join)
+def test_a_point_with_an_extreme_input_reaches_no_other_and_is_flagged_if_not_finite(case, value):
+    fitted = closure(*case)
+    inputs = {name: column[:40].copy() for name, column in points(fitted, 9).items()}
+    session = open_session(build_graph(fitted).SerializeToString())
+    whole = run_session(session, inputs, list(OUTPUTS))
+    for number, name in enumerate(fitted.inputs_):
+        inputs[name][number] = value
+    found = run_session(session, inputs, list(OUTPUTS))
+    count, floor = len(fitted.inputs_), fitted.settings.floor
+    expectations = {"xx": floor, "xy": 0.0, "yx": 0.0, "yy": floor}
+    for name, values in found.items():
+        assert np.isfinite(values).all(), name
+        assert np.array_equal(values[count:], whole[name][count:])
+    if not np.isfinite(value):
+        assert not found["trust"][:count].any()
+        for pair, expected in expectations.items():
+            assert (found[f"transport_tensor_{pair}"][:count] == expected).all()
+            assert (found[f"half_width_{pair}"][:count] == UNBOUNDED).all()
+
+
+def test_outputs_of_finite_inputs_are_flagged_only_where_they_overflow():
+    fitted = closure("local-energy", "ridge")
+    inputs = {name: column[:5].copy() for name, column in points(fitted, 9).items()}
+    plain = fitted.predict(inputs)
+    with np.errstate(all="ignore"):
+        kept = flagged(np, list(inputs.values()), outputs_of(plain), 50.0)
+        overflown = flagged(np, [np.array([1.0, np.inf])], outputs_of(plain, 2), 50.0)
+    assert np.array_equal(np.column_stack(kept.tensor), plain.tensor)
+    assert overflown.trust[0] == plain.trust[0]
+    assert overflown.trust[1] == 0.0
+
+
+def outputs_of(prediction, count=5):
+    return Outputs(
+        tuple(prediction.tensor[:count].T),
+        tuple(prediction.half_width[:count].T),
+        prediction.trust[:count],
+    )

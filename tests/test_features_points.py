@@ -7,13 +7,14 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from features_cases import coordinates, mean_state
+from features_cases import coordinates, mean_state, random_inputs
 from learnclosure.errors import RoleError
 from learnclosure.features.frames import frame_axes, tensor_to_frame, tensor_to_model
 from learnclosure.features.inputs import compute_inputs, input_flags
 from learnclosure.features.jet import find_jet
 from learnclosure.features.mean_state import MeanState
-from learnclosure.features.point_features import point_features
+from learnclosure.features.point import FUNCTIONS
+from learnclosure.features.point_features import EVERY_GROUP, chosen_features, point_features
 from learnclosure.quantities import FEATURES, INPUTS
 from learnclosure.validation.symmetry import transform_inputs
 
@@ -23,23 +24,6 @@ REFLECTION = ((1.0, 0.0), (0.0, -1.0))
 
 def rotation(angle):
     return ((np.cos(angle), -np.sin(angle)), (np.sin(angle), np.cos(angle)))
-
-
-def random_inputs(seed, count=40):
-    random = np.random.default_rng(seed)
-    inputs = {name: random.normal(size=count) for name in INPUTS}
-    for name in inputs:
-        if name.startswith(("pv_gradient", "planetary_beta", "topographic_beta")):
-            inputs[name] *= 2e-11
-        if name.startswith("velocity_gradient"):
-            inputs[name] *= 1e-6
-    inputs["coriolis_parameter"] *= 1e-4
-    for name, size in (
-        ("deformation_radius", 3e4), ("jet_width", 8e4), ("eddy_kinetic_energy", 0.05),
-        ("eddy_kinetic_energy_column", 0.02), ("eady_growth_rate", 1e-6), ("jet_speed", 0.4),
-    ):  # fmt: skip
-        inputs[name] = np.abs(inputs[name]) * size + 0.1 * size
-    return inputs
 
 
 @pytest.mark.parametrize(
@@ -66,7 +50,7 @@ def test_okubo_weiss_of_the_canonical_flows(flow, vorticity, okubo_weiss):
 def test_features_do_not_change_when_the_axes_turn(seed, angle, energy):
     inputs = random_inputs(seed)
     turned = transform_inputs(inputs, rotation(angle))
-    before, after = (point_features(np, each, energy) for each in (inputs, turned))
+    before, after = (point_features(np, each, energy, EVERY_GROUP) for each in (inputs, turned))
     for name in before:
         np.testing.assert_allclose(after[name], before[name], rtol=1e-9, atol=1e-12, err_msg=name)
 
@@ -77,7 +61,7 @@ def test_features_are_those_of_the_mirror_image_in_the_other_hemisphere(seed, en
     inputs = random_inputs(seed)
     mirrored = transform_inputs(inputs, REFLECTION)
     np.testing.assert_array_equal(mirrored["coriolis_parameter"], -inputs["coriolis_parameter"])
-    before, after = (point_features(np, each, energy) for each in (inputs, mirrored))
+    before, after = (point_features(np, each, energy, EVERY_GROUP) for each in (inputs, mirrored))
     for name in before:
         np.testing.assert_allclose(after[name], before[name], rtol=1e-12, atol=1e-15, err_msg=name)
 
@@ -155,11 +139,11 @@ def test_inputs_that_lack_something_give_finite_features_and_a_flag(case, energy
     layers = 1 if case == "one layer" else 2
     state = mean_state(**DEGENERATE[case], energy=np.zeros((layers, 12, 14)))
     inputs = compute_inputs(state)
-    features = point_features(np, inputs, energy)
+    features = point_features(np, inputs, energy, EVERY_GROUP)
     assert all(np.isfinite(values).all() for values in (*inputs.values(), *features.values()))
     flags = input_flags(state)
     expected = {
-        "still water": "no_jet",
+        "still water": "no_flow",
         "neutral stratification": "no_stratification",
         "no rotation": "no_rotation",
         "one sea cell": "no_jet",
@@ -175,12 +159,25 @@ def test_every_input_and_feature_has_its_row_and_there_are_enough():
     assert set(inputs) == set(INPUTS)
     names = set()
     for energy in (False, True):
-        names |= set(point_features(np, inputs, energy))
-    assert names == set(FEATURES)
-    assert len(FEATURES) >= 15
+        names |= set(point_features(np, inputs, energy, EVERY_GROUP))
+    assert names == set(FEATURES) == set(FUNCTIONS)
+    assert len(FEATURES) >= 40
     for row in (*INPUTS.values(), *FEATURES.values()):
         assert row.units
         assert row.long_name
+    assert all(row.topic for row in FEATURES.values())
+
+
+def test_closures_see_the_standard_features_unless_told_otherwise():
+    for energy in (False, True):
+        standard = [row.name for row in chosen_features(energy)]
+        assert all(FEATURES[name].standard for name in standard)
+        assert len(standard) == (27 if energy else 26)
+        everything = [row.name for row in chosen_features(energy, EVERY_GROUP)]
+        assert set(standard) < set(everything)
+    jets = {row.name for row in chosen_features(False, ("jet",))}
+    assert {"jet_distance", "axis_distance", "jet_zone"} <= jets
+    assert {FEATURES[name].topic for name in jets} == {"jet"}
 
 
 def test_features_without_eddy_energy_need_none():

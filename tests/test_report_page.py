@@ -120,6 +120,10 @@ def test_the_model_card_holds_regime_scores_audit_and_cautions(finished):
     assert "modelling centre's own validation" in card
     assert "## Not for" in card
     assert manifest["licence"] in card
+    assert manifest["citation"] in card
+    regime = card.partition("## Regime")[2].partition("##")[0]
+    assert "Coriolis parameter" in regime
+    assert "deformation radius" in regime
 
 
 def test_a_card_without_scores_still_warns():

@@ -21,6 +21,11 @@ def test_a_minimal_study_has_sound_defaults():
     assert study.closure.families == ("mean-field", "local-energy")
 
 
+def test_a_licence_is_written_as_spdx_writes_it():
+    study = parse_study(MINIMAL + "[export]\nlicence = 'mit or apache-2.0'\n")
+    assert study.export.licence == "MIT OR Apache-2.0"
+
+
 def test_relative_output_starts_from_the_folder_of_the_study(tmp_path):
     path = tmp_path / "study.toml"
     path.write_text(MINIMAL)
@@ -37,6 +42,8 @@ def test_relative_output_starts_from_the_folder_of_the_study(tmp_path):
         ("output = 'x'\n", "ensemble: Field required"),
         (MINIMAL + "[closure]\nfloor = 9e4\n", "cap must lie above floor"),
         (MINIMAL + "[closure]\nfamilies = ['local']\n", r"closure\.families\.0: .*found 'local'"),
+        (MINIMAL + "[export]\nlicence = 'do what you like'\n", r"export\.licence: is no SPDX"),
+        (MINIMAL + "[export]\nversion = '1.0'\n", r"export\.version: .*found '1\.0'"),
         ("not toml", "not a TOML document"),
         ("folder = '/'\n" + MINIMAL, "folder: unknown key"),
     ],

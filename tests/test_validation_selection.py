@@ -16,6 +16,7 @@ from learnclosure.features.inputs import compute_inputs
 from learnclosure.features.mean_state import MeanState
 from learnclosure.study import ClosureSettings, ValidationSettings
 from learnclosure.validation import out_of_fold
+from learnclosure.validation.baseline_records import BASELINES, BOUNDS
 from learnclosure.validation.evaluation import evaluate
 from learnclosure.validation.out_of_fold import Candidate
 from learnclosure.validation.selection import CandidateScore, choose, select_closure
@@ -194,15 +195,12 @@ def test_the_evidence_has_the_promised_shape_and_is_plain_json(evaluation):
         "half_width_coverage",
         "trust_mean",
     }
-    assert set(evaluation["baselines"]) == {
-        "constant",
-        "eady-visbeck",
-        "eady-visbeck-published",
-        "eke-mixing-length",
-        "eke-mixing-length-published",
-    }
-    for made in evaluation["baselines"].values():
-        assert set(made["folds"]) == {"random", "blocked", "region"}
+    # The invented statistics hold no local scalar.
+    assert set(evaluation["baselines"]) == {*BASELINES, *BOUNDS} - {"local-scalar"}
+    for name, made in evaluation["baselines"].items():
+        bound = name in BOUNDS
+        assert set(made["folds"]) == (set() if bound else {"random", "blocked", "region"})
+        assert all(found["out_of_sample"] != bound for found in made["regions"].values())
         assert set(made["regions"]) == {"alpha", "beta", "gamma", "delta"}
     assert set(evaluation["ceiling"]) == {"alpha", "beta", "gamma", "delta"}
     assert evaluation["tracers_scored"] == "withheld"

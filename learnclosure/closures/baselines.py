@@ -13,71 +13,26 @@ from typing import TYPE_CHECKING, Any, ClassVar
 import numpy as np
 import numpy.typing as npt
 
-from learnclosure.closures.constraints import TINY
+from learnclosure.closures.diffusivities import (
+    LARGEST_DIFFUSIVITY,
+    eady_visbeck_diffusivity,
+    energy_bounded_diffusivity,
+    held_larichev_diffusivity,
+    mixing_length_diffusivity,
+    relative_to_eddies,
+    suppressed_diffusivity,
+)
 from learnclosure.errors import TrainingError
 from learnclosure.features.instability import EADY_FACTOR
-from learnclosure.features.scales import eddy_speed, rhines_length
+from learnclosure.features.scales import eddy_speed, planetary_beta, rhines_length
 
 if TYPE_CHECKING:
     from learnclosure.closures.table import Table
 
 FloatArray = npt.NDArray[np.float64]
 
-
-def eady_visbeck_diffusivity(inverse_time: Any, length: Any, factor: Any) -> Any:
-    """Diffusivity from the rate of baroclinic growth and a length.
-
-    Parameters
-    ----------
-    inverse_time : array, s-1
-        ``|f| / sqrt(Ri)``, averaged over the column.
-    length : array, m
-    factor : array or float, 1
-        0.015 as published.
-
-    Returns
-    -------
-    array, m2 s-1
-        ``factor * inverse_time * length^2`` (Visbeck et al. 1997, J. Phys. Oceanogr. 27,
-        381-402).
-
-    Examples
-    --------
-    >>> round(eady_visbeck_diffusivity(2.5e-6, 100e3, 0.015), 6)
-    375.0
-    """
-    return factor * inverse_time * length * length
-
-
-def mixing_length_diffusivity(
-    speed: Any, length: Any, relative_speed: Any = 0.0, *, factor: Any = 0.35, b1: float = 4.0
-) -> Any:
-    """Diffusivity from eddy speed and mixing length, suppressed by the mean flow.
-
-    Parameters
-    ----------
-    speed : array, m s-1
-        Root mean square eddy speed ``sqrt(2 EKE)``.
-    length : array, m
-    relative_speed : array, m s-1
-        Mean flow minus eddy phase speed; zero for no suppression.
-    factor, b1 : float, 1
-        Constants, as published by default.
-
-    Returns
-    -------
-    array, m2 s-1
-        ``factor speed length / (1 + b1 relative_speed^2 / speed^2)`` (Bates et al. 2014,
-        J. Phys. Oceanogr. 44, 1523-1540).
-
-    Examples
-    --------
-    >>> speed = 0.02 ** 0.5
-    >>> [round(mixing_length_diffusivity(speed, 30e3, c), 2) for c in (0.0, 0.05, 0.1, 0.2)]
-    [1484.92, 989.95, 494.97, 164.99]
-    """
-    square = speed * speed
-    return factor * speed * length * square / (square + b1 * relative_speed * relative_speed + TINY)
+MEMORY = 4.0 * 86400.0
+"""Time after which eddies have forgotten their velocity, s (Ferrari and Nikurashin 2010)."""
 
 
 class Baseline:
@@ -214,51 +169,176 @@ class ConstantPerLayer(Baseline):
         return inputs["layer_index"] * 0.0 + 1.0
 
 
-class EadyVisbeck(Baseline):
-    """Eady growth rate times a length squared (Visbeck et al. 1997).
+def _inverse_time(inputs: Mapping[str, Any]) -> Any:
+    """``|f| / sqrt(Ri)`` of the column, s-1."""
+    return inputs["eady_growth_rate"] * (1.0 / EADY_FACTOR)
 
-    Parameters
-    ----------
-    published : bool
-        Use 0.015 in all layers and the jet width, the width of the baroclinic zone, as
-        length; otherwise the deformation radius (Stone 1972, J. Atmos. Sci. 29, 405-418)
-        and fitted constants.
+
+class EadyVisbeck(Baseline):
+    """Growth rate times the square of the width of the baroclinic zone.
+
+    ``k = 0.015 L^2 <|f| / sqrt(Ri)>`` with L the jet width (Visbeck et al. 1997, J. Phys.
+    Oceanogr. 27, 381-402; the length also of Green 1970, Q. J. R. Meteorol. Soc. 96,
+    157-185).
     """
 
     name = "eady-visbeck"
     family = "mean-field"
     published_constant = 0.015
-    required = ("layer_index", "eady_growth_rate", "deformation_radius", "jet_width")
+    required = ("layer_index", "eady_growth_rate", "jet_width")
 
     def _unit_diffusivity(self, xp: Any, inputs: Mapping[str, Any]) -> Any:  # noqa: ARG002
-        length = inputs["jet_width" if self.published else "deformation_radius"]
-        inverse_time = inputs["eady_growth_rate"] * (1.0 / EADY_FACTOR)
-        return eady_visbeck_diffusivity(inverse_time, length, 1.0)
+        return eady_visbeck_diffusivity(_inverse_time(inputs), inputs["jet_width"], 1.0)
+
+
+class Stone(Baseline):
+    """Growth rate times the square of the deformation radius.
+
+    ``k = L^2 <|f| / sqrt(Ri)>`` with L the first deformation radius and a constant of
+    order one (Stone 1972, J. Atmos. Sci. 29, 405-418; constant from memory).
+    """
+
+    name = "stone"
+    family = "mean-field"
+    published_constant = 1.0
+    required = ("layer_index", "eady_growth_rate", "deformation_radius")
+
+    def _unit_diffusivity(self, xp: Any, inputs: Mapping[str, Any]) -> Any:  # noqa: ARG002
+        return eady_visbeck_diffusivity(_inverse_time(inputs), inputs["deformation_radius"], 1.0)
+
+
+class HeldLarichev(Baseline):
+    """A cascade to the length where beta stops it.
+
+    ``k = U R xi^2`` with ``xi = U / (beta R^2)`` and U the growth rate ``|f| / sqrt(Ri)``
+    times R (Held and Larichev 1996, J. Atmos. Sci. 53, 946-952; constant of order one from
+    memory).
+    """
+
+    name = "held-larichev"
+    family = "mean-field"
+    published_constant = 1.0
+    required = (
+        "layer_index",
+        "eady_growth_rate",
+        "deformation_radius",
+        "planetary_beta_x",
+        "planetary_beta_y",
+    )
+
+    def _unit_diffusivity(self, xp: Any, inputs: Mapping[str, Any]) -> Any:
+        radius = inputs["deformation_radius"]
+        speed = _inverse_time(inputs) * radius
+        found = held_larichev_diffusivity(speed, radius, planetary_beta(xp, inputs), xp=xp)
+        return xp.minimum(found, LARGEST_DIFFUSIVITY)
 
 
 class EkeMixingLength(Baseline):
     """Eddy speed times the smaller of Rhines length and deformation radius.
 
-    The form of Bates et al. 2014 without suppression by the mean flow, since a host gives
-    no eddy phase speed; 0.35 as published, or one fitted constant per layer.
+    The form of Bates et al. 2014 without suppression by the mean flow; 0.35 as published,
+    or one fitted constant per layer.
     """
 
     name = "eke-mixing-length"
     family = "local-energy"
     published_constant = 0.35
-    required = (
+    required: ClassVar[tuple[str, ...]] = (
         "layer_index",
         "eddy_kinetic_energy",
         "eddy_kinetic_energy_column",
         "deformation_radius",
+        "planetary_beta_x",
+        "planetary_beta_y",
     )
 
     def _unit_diffusivity(self, xp: Any, inputs: Mapping[str, Any]) -> Any:
         speed = eddy_speed(xp, inputs["eddy_kinetic_energy"])
         length = xp.minimum(rhines_length(xp, inputs), inputs["deformation_radius"])
-        return mixing_length_diffusivity(speed, length, factor=1.0)
+        return mixing_length_diffusivity(speed, length, self._relative(xp, inputs), factor=1.0)
+
+    def _relative(self, xp: Any, inputs: Mapping[str, Any]) -> Any:  # noqa: ARG002
+        """Speed of the mean flow relative to the eddies, m s-1."""
+        return 0.0
+
+
+_SUPPRESSED = ("x_velocity", "y_velocity", "column_velocity_x", "column_velocity_y")
+
+
+def _relative_speed(xp: Any, inputs: Mapping[str, Any]) -> Any:
+    along_x, along_y = relative_to_eddies(inputs)
+    return xp.sqrt(along_x * along_x + along_y * along_y)
+
+
+class Bates(EkeMixingLength):
+    """Eddy speed times a mixing length, suppressed where the mean flow leaves the eddies.
+
+    Bates et al. 2014, J. Phys. Oceanogr. 44, 1523-1540 (0.35 and 4 from memory), with eddies
+    that drift with the column and as long Rossby waves.
+    """
+
+    name = "bates"
+    required = (*EkeMixingLength.required, *_SUPPRESSED)
+
+    def _relative(self, xp: Any, inputs: Mapping[str, Any]) -> Any:
+        return _relative_speed(xp, inputs)
+
+
+class FerrariNikurashin(Baseline):
+    """Eddy energy times a memory of four days, suppressed by the drift of the eddies.
+
+    Ferrari and Nikurashin 2010, J. Phys. Oceanogr. 40, 1501-1519 (form and time from
+    memory), with the deformation radius as inverse wavenumber and eddies that drift with
+    the column and as long Rossby waves.
+    """
+
+    name = "ferrari-nikurashin"
+    family = "local-energy"
+    published_constant = 1.0
+    required = (
+        "layer_index",
+        "eddy_kinetic_energy",
+        "deformation_radius",
+        "planetary_beta_x",
+        "planetary_beta_y",
+        *_SUPPRESSED,
+    )
+
+    def _unit_diffusivity(self, xp: Any, inputs: Mapping[str, Any]) -> Any:
+        energy = xp.maximum(inputs["eddy_kinetic_energy"], 0.0)
+        wavenumber = 1.0 / xp.maximum(inputs["deformation_radius"], 1.0)
+        return suppressed_diffusivity(energy, 1.0 / MEMORY, wavenumber, _relative_speed(xp, inputs))
+
+
+class EnergyBounded(Baseline):
+    """Share of the most that eddy energy allows.
+
+    ``k = 0.1 E sqrt(Ri) / |f|`` (Marshall, Maddison and Berloff 2012, J. Phys. Oceanogr. 42,
+    539-557; 0.1 from memory) over the whole column, with the kinetic energy a host gives
+    for E, which leaves out the potential part.
+    """
+
+    name = "energy-bounded"
+    family = "local-energy"
+    published_constant = 0.1
+    required = ("layer_index", "eddy_kinetic_energy_column", "eady_growth_rate")
+
+    def _unit_diffusivity(self, xp: Any, inputs: Mapping[str, Any]) -> Any:
+        energy = xp.maximum(inputs["eddy_kinetic_energy_column"], 0.0)
+        found = energy_bounded_diffusivity(energy, _inverse_time(inputs), 1.0, xp=xp)
+        return xp.minimum(found, LARGEST_DIFFUSIVITY)
 
 
 BASELINES: dict[str, type[Baseline]] = {
-    baseline.name: baseline for baseline in (ConstantPerLayer, EadyVisbeck, EkeMixingLength)
+    baseline.name: baseline
+    for baseline in (
+        ConstantPerLayer,
+        EadyVisbeck,
+        Stone,
+        HeldLarichev,
+        EkeMixingLength,
+        Bates,
+        FerrariNikurashin,
+        EnergyBounded,
+    )
 }

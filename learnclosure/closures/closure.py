@@ -10,7 +10,7 @@ import numpy as np
 import numpy.typing as npt
 from sklearn.base import clone
 
-from learnclosure.closures.baselines import Baseline, EadyVisbeck, EkeMixingLength
+from learnclosure.closures.baselines import Baseline, EkeMixingLength, Stone
 from learnclosure.closures.constraints import bounded_tensor, clip
 from learnclosure.closures.domain import RangeGuard
 from learnclosure.closures.intervals import HalfWidths
@@ -24,6 +24,7 @@ from learnclosure.closures.pointwise import (
     Outputs,
     Prepared,
     blended,
+    flagged,
     half_widths_on_axes,
     on_model_axes,
 )
@@ -34,12 +35,12 @@ from learnclosure.errors import TrainingError
 from learnclosure.features.frames import frame_axes, tensor_to_frame
 from learnclosure.features.point_features import point_features
 from learnclosure.features.scales import tensor_scale
-from learnclosure.study import ClosureSettings
+from learnclosure.study import ClosureSettings, FeatureSettings
 
 FloatArray = npt.NDArray[np.float64]
 
 FALLBACKS: dict[str, type[Baseline]] = {
-    "mean-field": EadyVisbeck,
+    "mean-field": Stone,
     "local-energy": EkeMixingLength,
 }
 BLOCK_CELLS = 8
@@ -88,6 +89,8 @@ class Closure:
     target : {"linear", "log-cholesky"}
     settings : ClosureSettings
         Floor and cap of the symmetric part, miscoverage, seed.
+    features : FeatureSettings, optional
+        Groups of features and the local frame.
     weighting : {"area", "area-and-sampling"}
         Weight of a point in training.
 
@@ -109,6 +112,7 @@ class Closure:
         regressor: str,
         target: str,
         settings: ClosureSettings,
+        features: FeatureSettings | None = None,
         *,
         weighting: Weighting = "area-and-sampling",
     ) -> None:
@@ -123,6 +127,7 @@ class Closure:
         self.regressor = regressor
         self.target = target
         self.settings = settings
+        self.features = FeatureSettings() if features is None else features
         self.weighting: Weighting = weighting
         self.half_widths_: HalfWidths | None = None
         self.regressor_: Any = None
@@ -216,8 +221,10 @@ class Closure:
         Prepared
         """
         return Prepared(
-            features=point_features(xp, inputs, self.uses_energy),
-            axes=frame_axes(xp, inputs),
+            features=point_features(
+                xp, inputs, self.uses_energy, self.features.groups, self.features.frame
+            ),
+            axes=frame_axes(xp, inputs, self.features.frame),
             scale=tensor_scale(xp, inputs, self.family),
         )
 
@@ -286,7 +293,9 @@ class Closure:
             If an input is missing, has another length or holds a value that is not finite.
         """
         values, prepared, raw = self._raw(inputs)
-        outputs = self.finish(np, raw, prepared, values)
+        made = self.finish(np, raw, prepared, values)
+        given = [values[name] for name in self.inputs_]
+        outputs = flagged(np, given, made, self.settings.floor)
         count = len(raw[0])
         return Prediction(
             tensor=stacked(outputs.tensor, count),
@@ -372,6 +381,7 @@ class Closure:
             and self.target == other.target
             and self.settings.seed == other.settings.seed
             and self.weighting == other.weighting
+            and self.features == other.features
             and np.array_equal(self._training.features, other._training.features)
             and np.array_equal(self._training.columns, other._training.columns)
         )

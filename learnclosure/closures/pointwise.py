@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from typing import Any, NamedTuple
 
 import numpy as np
@@ -124,6 +125,39 @@ def half_widths_on_axes(
         component(y_n, y_t, x_n, x_t),
         component(y_n, y_t, y_n, y_t),
     )
+
+
+def flagged(xp: Any, inputs: Sequence[Any], outputs: Outputs, floor: float) -> Outputs:
+    """Replace outputs of points where an input or an output is not finite.
+
+    Such points get the isotropic floor, no half-width and no trust, so that land or an
+    accident of the host at one point reaches no other and is plain to see.
+
+    Parameters
+    ----------
+    xp : namespace
+        Array namespace: NumPy or the graph.
+    inputs : sequence of array
+        Every input the outputs were made from.
+    outputs : Outputs
+    floor : float, m2 s-1
+
+    Returns
+    -------
+    Outputs
+        Unchanged, to the last bit, wherever all is finite.
+    """
+    total: Any = 0.0
+    for value in (*inputs, *outputs.tensor, *outputs.half_width, outputs.trust):
+        # Zero times what is not finite is not a number, and neither is a sum with it.
+        total = total + value * 0.0
+    whole = total >= 0.0
+    xx, xy, yx, yy = (
+        xp.where(whole, value, other)
+        for value, other in zip(outputs.tensor, (floor, 0.0, 0.0, floor), strict=True)
+    )
+    h_xx, h_xy, h_yx, h_yy = (xp.where(whole, value, UNBOUNDED) for value in outputs.half_width)
+    return Outputs((xx, xy, yx, yy), (h_xx, h_xy, h_yx, h_yy), xp.where(whole, outputs.trust, 0.0))
 
 
 def on_model_axes(

@@ -11,12 +11,14 @@ import xarray as xr
 
 from learnclosure import __version__
 from learnclosure.diagnosis.artefact import StatisticsBuilder
+from learnclosure.diagnosis.ceiling_artefact import add_ceilings
+from learnclosure.diagnosis.ceilings import estimate_ceilings
 from learnclosure.diagnosis.coarse import Coarsening
+from learnclosure.diagnosis.degeneracy import check_information
 from learnclosure.diagnosis.depth_axes import add_depth_axes
 from learnclosure.diagnosis.estimate import Estimator, Form, GroupEstimate, WithheldSkill
 from learnclosure.diagnosis.gauge import HelmholtzSolver, rotational_share
 from learnclosure.diagnosis.inversion import SmoothInversion
-from learnclosure.diagnosis.memory import MemoryGradient
 from learnclosure.diagnosis.moments import EnsembleSource, Moments, accumulate_moments
 from learnclosure.diagnosis.quality import (
     add_budget,
@@ -25,6 +27,7 @@ from learnclosure.diagnosis.quality import (
     cautions,
     tensor_components,
 )
+from learnclosure.diagnosis.sampling import jackknife_standard_error
 from learnclosure.diagnosis.tensor import (
     condition_number,
     scalar_diffusivity,
@@ -74,19 +77,18 @@ def diagnose(
     moments = accumulate_moments(
         ensemble, coarsening, progress=lambda share: report(0.7 * share, "moments")
     )
-    inversion = SmoothInversion(geometry, area, chosen, len(ensemble.tracers))
-    velocity = (moments.whole.mean["x_velocity"], moments.whole.mean["y_velocity"])
-    memory = MemoryGradient(velocity, geometry, chosen.memory_time, chosen.blurring_length)
-    gauge = HelmholtzSolver(geometry, chosen.gauge_boundary)
-    kept = chosen.kept_rotational_weight
-    estimator = Estimator(geometry, area, inversion, ensemble.tracers, memory, gauge, kept)
+    check_information(moments, ensemble, geometry.mask)
+    estimator = Estimator.from_settings(
+        geometry, area, chosen, ensemble.tracers, moments.whole.mean
+    )
     whole = estimator.group(moments.whole)
     halves = tuple(estimator.group(half) for half in moments.halves)
     valid = estimator.determined(whole.equations)
     _check_determined(ensemble, whole, valid)
     report(0.8, "jackknife")
-    error = estimator.standard_error(moments)
-    report(0.95, "skill")
+    left_out = estimator.left_out(moments)
+    error = None if left_out is None else jackknife_standard_error(left_out)
+    report(0.85, "skill")
     skill = estimator.withheld_skill(whole, ensemble.withheld_tracers, valid)
     other_form: Form = "memory" if chosen.form == "local" else "local"
     other = estimator.group(moments.whole, other_form)
@@ -95,14 +97,24 @@ def diagnose(
     builder = StatisticsBuilder(coarsening.x, coarsening.y, len(geometry.mask))
     _add_mean_state(builder, ensemble, coarsening, moments)
     _add_tracers(builder, ensemble, whole, halves, moments)
-    _add_gauge(builder, gauge, whole)
+    _add_gauge(builder, estimator.gauge, whole)
     _add_tensor(builder, estimator, whole, valid, error)
     add_quality(builder, ensemble, estimator, whole, halves, valid)
     add_budget(builder, ensemble, estimator, whole, halves, valid, error)
     add_skill(builder, skill, other_form, other_skill)
+    if halves and left_out is not None and chosen.ceiling_draws:
+        report(0.9, "ceilings")
+        names = (*ensemble.tracers, *ensemble.withheld_tracers)
+        add_ceilings(
+            builder,
+            estimate_ceilings(
+                moments, estimator, whole, halves, left_out, valid, names,
+                draws=chosen.ceiling_draws,
+            ),
+        )  # fmt: skip
     add_depth_axes(builder, ensemble, coarsening, moments.whole, whole.gradient, chosen)
     report(1.0, "done")
-    statistics = builder.build(_attributes(ensemble, chosen, inversion, skill))
+    statistics = builder.build(_attributes(ensemble, chosen, estimator.inversion, skill))
     return statistics.assign_attrs(cautions="; ".join(cautions(statistics)))
 
 

@@ -13,7 +13,6 @@ from learnclosure.diagnosis.inversion import SmoothFit, SmoothInversion
 from learnclosure.diagnosis.memory import MemoryGradient
 from learnclosure.diagnosis.moments import GroupMoments, Moments
 from learnclosure.diagnosis.sampling import (
-    jackknife_standard_error,
     spearman_brown,
     weighted_correlation,
 )
@@ -28,6 +27,7 @@ from learnclosure.diagnosis.tensor import (
     normal_equations,
 )
 from learnclosure.ensemble.grid import Geometry, divergence, gradient
+from learnclosure.study import DiagnosisSettings
 
 FloatArray = npt.NDArray[np.float64]
 BoolArray = npt.NDArray[np.bool_]
@@ -112,6 +112,44 @@ class Estimator:
         self.gauge = gauge
         self.rotational_weight = rotational_weight
 
+    @classmethod
+    def from_settings(
+        cls,
+        geometry: Geometry,
+        area: FloatArray,
+        settings: DiagnosisSettings,
+        tracers: tuple[str, ...],
+        mean: dict[str, FloatArray],
+    ) -> Estimator:
+        """Make the estimator of one region from a study's settings.
+
+        Parameters
+        ----------
+        geometry : Geometry
+        area : ndarray, shape (layer, y, x), m2
+        settings : DiagnosisSettings
+        tracers : tuple of str
+        mean : dict of str to ndarray, shape (layer, y, x)
+            Holds the mean ``x_velocity`` and ``y_velocity``, m s-1.
+
+        Returns
+        -------
+        Estimator
+        """
+        memory = MemoryGradient(
+            (mean["x_velocity"], mean["y_velocity"]), geometry,
+            settings.memory_time, settings.blurring_length,
+        )  # fmt: skip
+        return cls(
+            geometry,
+            area,
+            SmoothInversion(geometry, area, settings, len(tracers)),
+            tracers,
+            memory,
+            HelmholtzSolver(geometry, settings.gauge_boundary),
+            settings.kept_rotational_weight,
+        )
+
     def gradients(self, mean: dict[str, FloatArray]) -> dict[str, FloatArray]:
         """Differentiate mean tracers, shape (2, layer, y, x) each."""
         return {name: np.stack(gradient(values, self.geometry)) for name, values in mean.items()}
@@ -167,8 +205,8 @@ class Estimator:
         condition = condition_number(equations.M)
         return self.geometry.mask & (condition <= LARGEST_CONDITION_NUMBER)
 
-    def standard_error(self, moments: Moments) -> FloatArray | None:
-        """Compute the member jackknife error of the smooth tensor.
+    def left_out(self, moments: Moments) -> FloatArray | None:
+        """Fit the smooth tensor without each member in turn.
 
         Parameters
         ----------
@@ -176,18 +214,18 @@ class Estimator:
 
         Returns
         -------
-        ndarray, shape (layer, y, x, 2, 2), m2 s-1, or None
+        ndarray, shape (member, layer, y, x, 2, 2), m2 s-1, or None
             None with fewer than three members.
         """
         members = len(next(iter(moments.member_product.values())))
         if members < LEAST_MEMBERS_FOR_JACKKNIFE:
             return None
-        left_out = []
+        tensors = []
         for member in range(members):
             mean, flux = moments.without_member(member)
             equations = self.equations(flux, self.acted_on(self.gradients(mean)))
-            left_out.append(self.inversion.fit(equations).tensor)
-        return jackknife_standard_error(np.stack(left_out))
+            tensors.append(self.inversion.fit(equations).tensor)
+        return np.stack(tensors)
 
     def leverages(self, estimate: GroupEstimate, tracers: tuple[str, ...]) -> dict[str, FloatArray]:
         """Compute the leverage of named tracers, shape (layer, y, x)."""

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from typing import Protocol
 
@@ -16,6 +16,9 @@ from learnclosure.errors import DiagnosisError
 
 FloatArray = npt.NDArray[np.float64]
 IndexArray = npt.NDArray[np.int64]
+
+TIME_BLOCKS = 4
+"""Consecutive blocks of time whose moments are kept apart, to see what more times give."""
 
 
 class EnsembleSource(Protocol):
@@ -70,12 +73,43 @@ class Moments:
         Time mean of each tracer of each member.
     member_product : dict of str to ndarray, shape (member, 2, layer, y, x)
         Time mean of each member's product of departures from the ensemble mean.
+    blocks : tuple of tuples of GroupMoments
+        The halves of the members in each of a few consecutive blocks of time.
+    block_times : tuple of int
+        Number of times of each block.
     """
 
     whole: GroupMoments
     halves: tuple[GroupMoments, ...]
     member_mean: dict[str, FloatArray]
     member_product: dict[str, FloatArray]
+    blocks: tuple[tuple[GroupMoments, ...], ...] = ()
+    block_times: tuple[int, ...] = ()
+
+    def subset(self, members: IndexArray) -> tuple[dict[str, FloatArray], dict[str, FloatArray]]:
+        """Tracer means and unbiased eddy fluxes of some of the members.
+
+        Departures stay those from the mean of all members, so that no products between
+        members are needed; ``reliability.subset_noise`` says what that does to the noise.
+
+        Parameters
+        ----------
+        members : ndarray of int
+            Numbers of the members, each once.
+
+        Returns
+        -------
+        mean : dict of str to ndarray, shape (layer, y, x)
+        flux : dict of str to ndarray, shape (2, layer, y, x)
+        """
+        count = len(next(iter(self.member_product.values())))
+        unbias = count / (count - 1)
+        mean = {name: values[members].mean(axis=0) for name, values in self.member_mean.items()}
+        flux = {
+            name: unbias * product[members].mean(axis=0)
+            for name, product in self.member_product.items()
+        }
+        return mean, flux
 
     def without_member(self, member: int) -> tuple[dict[str, FloatArray], dict[str, FloatArray]]:
         """Tracer means and eddy fluxes of the ensemble without one member.
@@ -122,6 +156,18 @@ class _Group:
     def add_energy(self, summed: FloatArray) -> None:
         value = summed / (len(self.members) - 1)
         self.energy = value if self.energy is None else self.energy + value
+
+    @classmethod
+    def merged(cls, parts: Sequence[_Group]) -> _Group:
+        """Sum what the same members gave at different times."""
+        total = cls(parts[0].members)
+        for part in parts:
+            for own, other in ((total.mean, part.mean), (total.flux, part.flux)):
+                for name, value in other.items():
+                    own[name] = own[name] + value if name in own else value
+            if part.energy is not None:
+                total.energy = part.energy if total.energy is None else total.energy + part.energy
+        return total
 
     def finish(self, times: int) -> GroupMoments:
         assert self.energy is not None
@@ -203,14 +249,16 @@ def accumulate_moments(
     count = _check_members(source)
     everyone = np.arange(count)
     whole = _Group(everyone)
-    halves: list[_Group] = []
+    times = len(source.times)
+    blocks: list[list[_Group]] = [[] for _ in range(min(TIME_BLOCKS, times))]
+    block_of = np.arange(times) * len(blocks) // times
     if count >= LEAST_MEMBERS_FOR_HALVES:
-        halves = [_Group(everyone[0::2]), _Group(everyone[1::2])]
+        blocks = [[_Group(everyone[0::2]), _Group(everyone[1::2])] for _ in blocks]
     names = (*source.tracers, *source.withheld_tracers)
     member_mean: dict[str, FloatArray] = {}
     member_product: dict[str, FloatArray] = {}
-    times = len(source.times)
     for time in range(times):
+        halves = blocks[block_of[time]]
         fields = source.fields(time)
         for name, values in fields.items():
             coarse = coarsening.mean(values)
@@ -242,9 +290,15 @@ def accumulate_moments(
                 half.add_flux(name, np.stack(parts))
         if progress is not None:
             progress((time + 1) / times)
+    lengths = tuple(int(length) for length in np.bincount(block_of))
     return Moments(
         whole=whole.finish(times),
-        halves=tuple(half.finish(times) for half in halves),
+        halves=tuple(_Group.merged(parts).finish(times) for parts in zip(*blocks, strict=True)),
         member_mean={name: total / times for name, total in member_mean.items()},
         member_product={name: total / times for name, total in member_product.items()},
+        blocks=tuple(
+            tuple(half.finish(length) for half in halves)
+            for halves, length in zip(blocks, lengths, strict=True)
+        ),
+        block_times=lengths,
     )

@@ -5,6 +5,8 @@ from __future__ import annotations
 import numpy as np
 import numpy.typing as npt
 
+from learnclosure.diagnosis.skill import LEAST_VARIATION
+
 FloatArray = npt.NDArray[np.float64]
 
 
@@ -45,26 +47,34 @@ def weighted_correlation(first: FloatArray, second: FloatArray, weights: FloatAr
     Returns
     -------
     ndarray, shape (...)
-        NaN where either does not vary.
+        NaN where either does not vary by more than rounding.
     """
     counted = weights > 0.0
     weight = np.where(counted, weights, 0.0)
     one, two = np.where(counted, first, 0.0), np.where(counted, second, 0.0)
     total = weight.sum(axis=(-2, -1), keepdims=True)
+    sizes = [(weight * values**2).sum(axis=(-2, -1)) for values in (one, two)]
     with np.errstate(divide="ignore", invalid="ignore"):
         one = one - (weight * one).sum(axis=(-2, -1), keepdims=True) / total
         two = two - (weight * two).sum(axis=(-2, -1), keepdims=True) / total
         covariance = (weight * one * two).sum(axis=(-2, -1))
-        scale = (weight * one**2).sum(axis=(-2, -1)) * (weight * two**2).sum(axis=(-2, -1))
-        return np.asarray(np.where(scale > 0.0, covariance / np.sqrt(scale), np.nan))
+        variances = [(weight * values**2).sum(axis=(-2, -1)) for values in (one, two)]
+        varies = np.logical_and(
+            *(v > LEAST_VARIATION**2 * s for v, s in zip(variances, sizes, strict=True))
+        )
+        scale = np.sqrt(variances[0] * variances[1])
+        return np.asarray(np.where(varies & (scale > 0.0), covariance / scale, np.nan))
 
 
-def spearman_brown(correlation: FloatArray) -> FloatArray:
-    """Reliability of a whole from the correlation of its halves, ``2r/(1+r)``.
+def spearman_brown(correlation: FloatArray, length: float | FloatArray = 2.0) -> FloatArray:
+    """Reliability of a whole from that of its parts, ``k r/(1 + (k - 1) r)``.
 
     Parameters
     ----------
     correlation : ndarray
+        Correlation ``r`` of two independent parts.
+    length : float or ndarray, optional
+        How many times ``k`` more the whole averages than a part; two halves make a whole.
 
     Returns
     -------
@@ -74,4 +84,4 @@ def spearman_brown(correlation: FloatArray) -> FloatArray:
         (Spearman 1910 and Brown 1910, British Journal of Psychology 3).
     """
     positive = np.maximum(correlation, 0.0)
-    return np.asarray(2.0 * positive / (1.0 + positive))
+    return np.asarray(length * positive / (1.0 + (length - 1.0) * positive))

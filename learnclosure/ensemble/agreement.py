@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Iterator, Sequence
 from typing import Any
 
 import numpy as np
@@ -12,6 +12,8 @@ import xarray as xr
 from learnclosure.ensemble.sources import Member
 from learnclosure.errors import GridError, SourceError
 
+MOST_SHOWN = 3
+"""Missing times that are written out."""
 REMEDY = "give members on one grid with the same times"
 
 
@@ -36,16 +38,50 @@ def check_members_alike(members: Sequence[Member], fields: Iterable[str], time: 
     GridError
         If dimensions, coordinates or times differ.
     """
+    for problem in find_disagreements(members, fields, time):
+        raise problem
+
+
+def find_disagreements(
+    members: Sequence[Member], fields: Iterable[str], time: str | None
+) -> Iterator[SourceError | GridError]:
+    """Find every member that differs from the first one, as ``check_members_alike`` does.
+
+    Parameters
+    ----------
+    members : sequence of Member
+    fields : iterable of str
+        Variables that will be read.
+    time : str or None
+        Time dimension.
+
+    Yields
+    ------
+    SourceError or GridError
+        The first difference of each variable of each member.
+    """
     first = members[0]
     names = list(fields)
     dims = sorted({str(dim) for name in names for dim in first.dataset[name].dims})
     for member in _others(members):
+        try:
+            if time is not None:
+                _check_times(first, member, time)
+        except GridError as error:
+            # Its fields are as long as its times: one sentence is enough.
+            yield error
+            continue
         for name in names:
-            _check_field(first, member, name)
+            try:
+                _check_field(first, member, name)
+            except (SourceError, GridError) as error:
+                yield error
         for dim in dims:
-            if dim != member.dimension:
-                what = "times" if dim == time else "grids"
-                _check_values(first, member, dim, what, {})
+            if dim not in (member.dimension, time):
+                try:
+                    _check_values(first, member, dim, "grids", {})
+                except GridError as error:
+                    yield error
 
 
 def check_grids_alike(members: Sequence[Member], names: Iterable[str], time: str | None) -> None:
@@ -75,6 +111,36 @@ def _others(members: Sequence[Member]) -> list[Member]:
     """Return the first member of every other dataset."""
     unique = {id(member.dataset): member for member in reversed(members)}
     return [member for member in members[1:] if unique[id(member.dataset)] is member]
+
+
+def _check_times(first: Member, member: Member, time: str) -> None:
+    """Refuse a member with other times; say which it lacks where they can be compared."""
+    sizes = [one.dataset.sizes.get(time) for one in (first, member)]
+    coordinates = [one.dataset.variables.get(time) for one in (first, member)]
+    there, here = coordinates
+    if there is None or here is None or there.attrs.get("units") != here.attrs.get("units"):
+        if there is not None or here is not None:
+            _check_values(first, member, time, "times", {})
+        if sizes[1] is not None and sizes[0] != sizes[1]:
+            raise GridError(
+                "a member has another number of times",
+                where=member.where(time),
+                found=f"{sizes[1]} times",
+                expected=f"{sizes[0]} as in {first.path}",
+                remedy=REMEDY,
+            )
+        return
+    lacking = np.setdiff1d(there.values, here.values)
+    if lacking.size and np.isin(here.values, there.values).all():
+        shown = ", ".join(f"{value:g}" for value in lacking[:MOST_SHOWN].astype(np.float64))
+        raise GridError(
+            f"a member lacks {lacking.size} of {there.size} times",
+            where=member.where(time),
+            found=f"none at {shown}{', ...' if lacking.size > MOST_SHOWN else ''}",
+            expected=f"every time of {first.path}",
+            remedy="add the missing times, or remove them from all members",
+        )
+    _check_values(first, member, time, "times", {})
 
 
 def _check_field(first: Member, member: Member, name: str) -> None:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from contextlib import ExitStack
 from functools import cached_property
 from pathlib import Path
@@ -163,6 +164,24 @@ class Ensemble:
                 found.setdefault(name, []).append(values)
         return {name: np.stack(values) for name, values in found.items()}
 
+    def find_problems(self, time: int) -> Iterator[SourceError]:
+        """Find what keeps the fields of one time from being read, member by member.
+
+        Parameters
+        ----------
+        time : int
+
+        Yields
+        ------
+        SourceError
+            The first problem of each member.
+        """
+        for member in self.members:
+            try:
+                self._member_fields(member, time)
+            except SourceError as error:
+                yield error
+
     def _member_fields(self, member: Member, time: int) -> dict[str, FloatArray]:
         mask = self.grid.geometry.mask
         result = {part: self._velocity(member, part, time) for part in ("x_velocity", "y_velocity")}
@@ -197,6 +216,7 @@ class Ensemble:
         name, face = getattr(self.roles, part), self._face(part)
         values = self._read(member, name, time)
         finite = np.isfinite(values)
+        self._refuse_absent(finite, member, name, time)
         if face is None:
             self._require(self.grid.geometry.mask, finite, member, name, time)
         else:
@@ -280,6 +300,7 @@ class Ensemble:
         """Read a field at cell centres as the files have it, checked against the mask."""
         values = self._read(member, name, time)
         finite, mask = np.isfinite(values), self.grid.geometry.mask
+        self._refuse_absent(finite, member, name, time)
         self._require(mask, finite, member, name, time)
         if name in self.tracers:
             self._refuse_stray(finite & ~mask, member, name, time)
@@ -294,6 +315,16 @@ class Ensemble:
                 found=f"{count} at time number {time}",
                 expected=f"the land of {self.members[0].path} in every member and at every time",
                 remedy="mask the same cells in all members, times and tracers",
+            )
+
+    def _refuse_absent(self, finite: BoolArray, member: Member, name: str, time: int) -> None:
+        if not finite.any() and self.grid.geometry.mask.any():
+            raise SourceError(
+                "a member has no values at one time, so times would differ in their members",
+                where=member.where(name),
+                found=f"nothing at time number {time}",
+                expected=f"{len(self.members)} members at every time",
+                remedy="add what is missing, or remove this time or this member",
             )
 
     def _require(
@@ -365,6 +396,21 @@ class Ensemble:
             ) from None
         absent = [axis for axis, dim in enumerate((member.dimension, time, layer)) if dim is None]
         return np.expand_dims(values, absent)
+
+    @property
+    def stored_bytes(self) -> int:
+        """Bytes of all fields and times that are read, in the precision of the files."""
+        datasets = {id(member.dataset): member.dataset for member in self.members}
+        return sum(
+            int(dataset.variables[name].nbytes)
+            for dataset in datasets.values()
+            for name in self.roles.fields
+        )
+
+    @property
+    def times_read_at_once(self) -> int:
+        """Times kept in memory, in the precision of the files."""
+        return self._block_times
 
     @cached_property
     def _block_times(self) -> int:

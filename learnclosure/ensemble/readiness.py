@@ -8,6 +8,7 @@ from pathlib import Path
 
 import numpy as np
 
+from learnclosure.ensemble.problems import find_problems
 from learnclosure.ensemble.reader import Ensemble, open_ensemble
 from learnclosure.ensemble.sources import (
     LEAST_MEMBERS_FOR_HALVES,
@@ -59,7 +60,7 @@ class Readiness:
     missing : list of str
         What is not there and what cannot be done without it.
     problems : list of str
-        What keeps the study from running, one sentence each.
+        What keeps the study from running, one sentence each: all that was found.
     """
 
     name: str
@@ -99,9 +100,11 @@ def inspect_ensemble(table: EnsembleTable, folder: Path | str = ".") -> Readines
         readiness.files = find_files(table, start)
         with open_ensemble(table, start) as ensemble:
             _describe(readiness, ensemble, table)
-            ensemble.fields(0)
+            readiness.problems += map(str, ensemble.find_problems(0))
     except InputError as error:
-        readiness.problems.append(str(error))
+        # What stopped the opening comes first; the same sentence is not said twice.
+        found = [str(error), *map(str, find_problems(table, start))]
+        readiness.problems += dict.fromkeys(found)
         _list_variables(readiness, table, start)
     return readiness
 

@@ -135,7 +135,24 @@ def content_digest(paths: Sequence[Path]) -> str:
     return total.hexdigest()
 
 
-def _open(path: Path, stack: ExitStack) -> xr.Dataset:
+def open_dataset(path: Path, stack: ExitStack) -> xr.Dataset:
+    """Open a NetCDF file or a Zarr store, lazily and without decoding times.
+
+    Parameters
+    ----------
+    path : Path
+    stack : ExitStack
+        Closes it.
+
+    Returns
+    -------
+    xarray.Dataset
+
+    Raises
+    ------
+    SourceError
+        If it is neither or cannot be read.
+    """
     try:
         if _is_zarr(path):
             engine = "zarr"
@@ -228,7 +245,7 @@ def open_members(table: EnsembleTable, folder: Path, stack: ExitStack) -> list[M
     paths = find_files(table, folder)
     stems = {path.stem for path in paths}
     for number, path in enumerate(paths):
-        dataset = _open(path, stack)
+        dataset = open_dataset(path, stack)
         label = path.stem if len(stems) == len(paths) else number
         members += _members_of(path, dataset, table.grid.member, label)
     if len(members) < 2:

@@ -20,6 +20,11 @@ class GraphBuilder:
     operator, inputs and attributes as an earlier one is not added again, so a graph
     depends only on what is computed and in which order.
 
+    Parameters
+    ----------
+    single : bool, optional
+        Whether emitters take products in single precision where they may.
+
     Examples
     --------
     >>> builder = GraphBuilder()
@@ -29,7 +34,8 @@ class GraphBuilder:
     True
     """
 
-    def __init__(self) -> None:
+    def __init__(self, *, single: bool = False) -> None:
+        self.single = single
         self._inputs: list[ValueInfoProto] = []
         self._outputs: list[ValueInfoProto] = []
         self._nodes: list[NodeProto] = []
@@ -71,7 +77,7 @@ class GraphBuilder:
         Parameters
         ----------
         value : array-like
-            Numbers become double; integer arrays keep int64.
+            Numbers become double; arrays of int64 and float32 keep their type.
 
         Returns
         -------
@@ -79,7 +85,7 @@ class GraphBuilder:
             Its name.
         """
         array = np.array(value)
-        if array.dtype != np.int64 or array.ndim == 0:
+        if array.dtype not in (np.int64, np.float32) or array.ndim == 0:
             array = array.astype(np.float64)
         array = np.ascontiguousarray(array).reshape(array.shape)
         key = (array.dtype.str, array.shape, array.tobytes())
@@ -195,10 +201,10 @@ def attribute_values(node: NodeProto) -> dict[str, Any]:
     """
     values: dict[str, Any] = {}
     for attribute in node.attribute:
-        value = helper.get_attribute_value(attribute)
         if attribute.type == AttributeProto.INTS:
-            value = np.array(value, dtype=np.int64)
+            values[attribute.name] = np.fromiter(attribute.ints, np.int64, len(attribute.ints))
         elif attribute.type == AttributeProto.TENSOR:
-            value = tensors.to_array(value)
-        values[attribute.name] = value
+            values[attribute.name] = tensors.to_array(attribute.t)
+        else:
+            values[attribute.name] = helper.get_attribute_value(attribute)
     return values

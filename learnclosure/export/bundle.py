@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
-from onnx import ModelProto
+from onnx import ModelProto, TensorProto
 from onnx.reference import ReferenceEvaluator
 
 from learnclosure import __version__
@@ -22,12 +22,14 @@ from learnclosure.export.layout import (
     MANIFEST_FILE,
     REFERENCE_FILE,
     SCHEMA,
+    SINGLE_FILE,
     SUMS_FILE,
     sums_text,
 )
 from learnclosure.export.manifest import make_manifest, manifest_text
 from learnclosure.export.reference import (
     AGREEMENT_LIMIT,
+    SINGLE_LIMIT,
     largest_difference,
     reference_file,
     with_tails,
@@ -40,6 +42,9 @@ if TYPE_CHECKING:
     from learnclosure.study import ExportSettings
 
 FloatArray = npt.NDArray[np.float64]
+
+SINGLE_MARGIN = 2.0
+"""Stated tolerance of single precision over the difference met."""
 
 
 def export_bundle(
@@ -92,6 +97,9 @@ def export_bundle(
     content = model.SerializeToString(deterministic=True)
     agreement = measure_agreement(model, content, inputs, expected)
     _require_agreement(agreement)
+    variant = None
+    if settings.single_precision:
+        variant = single_variant(closure, metadata, inputs, expected)
     manifest = make_manifest(
         closure,
         settings,
@@ -100,9 +108,11 @@ def export_bundle(
         reference_inputs=drawn,
         points=len(next(iter(inputs.values()))),
         agreement=agreement,
+        single=None if variant is None else variant[1],
     )
     files = {
         GRAPH_FILE: content,
+        **({} if variant is None else {SINGLE_FILE: variant[0]}),
         MANIFEST_FILE: manifest_text(manifest),
         REFERENCE_FILE: reference_file(
             inputs,
@@ -122,11 +132,58 @@ def export_bundle(
         outcome = verify_bundle(temporary)
         if not outcome.passed:
             failed = [
-                f"{check.name} ({check.found})" for check in outcome.checks if not check.passed
+                f"{check.name} ({check.rule}: {check.found})"
+                for check in outcome.checks
+                if not check.passed
             ]
             raise CheckFailedError(
                 f"the bundle does not pass its own gate: {'; '.join(failed)}", where=folder
             )
+
+
+def single_variant(
+    closure: Closure,
+    metadata: Mapping[str, str],
+    inputs: Mapping[str, FloatArray],
+    expected: Mapping[str, FloatArray],
+) -> tuple[bytes, dict[str, Any]] | None:
+    """Write the variant whose regressor computes in single precision.
+
+    Parameters
+    ----------
+    closure : Closure
+    metadata : mapping of str to str
+        Properties of the model.
+    inputs, expected : mapping of str to ndarray, shape (point,)
+        Reference points, and what the closure makes of them.
+
+    Returns
+    -------
+    content : bytes
+        The graph.
+    record : dict
+        What the manifest says of it: its tolerance is twice the largest difference met,
+        since other processors round differently.
+
+    ``None`` stands for both if single precision would change nothing (trees compare and add
+    in double), or too much: beyond ``SINGLE_LIMIT`` of the spread of an output.
+    """
+    model = build_graph(closure, metadata, single=True)
+    if not any(tensor.data_type == TensorProto.FLOAT for tensor in model.graph.initializer):
+        return None
+    content = model.SerializeToString(deterministic=True)
+    found = run_session(open_session(content), inputs, list(OUTPUTS))
+    difference, place = largest_difference(found, expected)
+    tolerance = float(f"{SINGLE_MARGIN * difference:.1e}")
+    if not 0.0 < tolerance <= SINGLE_LIMIT:
+        return None
+    return content, {
+        "file": SINGLE_FILE,
+        "tolerance": tolerance,
+        "met_in": place,
+        "meaning": "largest difference from the closure, over the spread of an output; products "
+        "of the regressor are single, all else is double",
+    }
 
 
 def measure_agreement(

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -19,6 +20,8 @@ class Check:
         What was found.
     value, limit : float or None
         Measured value and the most it may be, where the check measures something.
+    rule : str
+        Name of the rule that was broken, a key of ``rules.RULES``; empty if passed.
     """
 
     name: str
@@ -26,6 +29,7 @@ class Check:
     found: str
     value: float | None = None
     limit: float | None = None
+    rule: str = ""
 
 
 @dataclass(frozen=True)
@@ -38,6 +42,7 @@ class VerifyReport:
     Attributes
     ----------
     folder : Path
+        Folder or archive.
     checks : tuple of Check
     """
 
@@ -51,4 +56,35 @@ class VerifyReport:
 
 
 class RefusalError(Exception):
-    """Raised within a check to say why it does not pass; never leaves the gate."""
+    """Raised within a check to say why it does not pass; never leaves the gate.
+
+    Parameters
+    ----------
+    rule : str
+        Name of the rule that was broken.
+    found : str
+        What was found.
+    """
+
+    def __init__(self, rule: str, found: str) -> None:
+        super().__init__(found)
+        self.rule = rule
+
+
+def attempt(name: str, step: Callable[[], str]) -> Check:
+    """Make one check.
+
+    Parameters
+    ----------
+    name : str
+    step : callable
+        Returns what was found, or raises ``RefusalError``.
+
+    Returns
+    -------
+    Check
+    """
+    try:
+        return Check(name, True, step())
+    except RefusalError as refusal:
+        return Check(name, False, str(refusal), rule=refusal.rule)

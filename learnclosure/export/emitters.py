@@ -94,22 +94,34 @@ def emit_scores(builder: GraphBuilder, transformer: Any, matrix: str) -> str:
 
 
 def _affine(builder: GraphBuilder, values: str, weights: FloatArray, biases: FloatArray) -> str:
-    product = builder.node("MatMul", [values, builder.constant(weights)])
-    return builder.node("Add", [product, builder.constant(biases)])
+    kind = np.float32 if builder.single else np.float64
+    product = builder.node("MatMul", [values, builder.constant(weights.astype(kind))])
+    return builder.node("Add", [product, builder.constant(biases.astype(kind))])
+
+
+def _narrow(builder: GraphBuilder, values: str) -> str:
+    """Go over to the precision products are taken in."""
+    return builder.node("Cast", [values], to=TensorProto.FLOAT) if builder.single else values
+
+
+def _widen(builder: GraphBuilder, values: str) -> str:
+    """Come back to double precision."""
+    return builder.node("Cast", [values], to=TensorProto.DOUBLE) if builder.single else values
 
 
 def _emit_ridge(builder: GraphBuilder, regressor: Any, matrix: str) -> str:
-    scores = emit_scores(builder, regressor.transformer_, matrix)
-    return _affine(builder, scores, regressor.coefficients_.T, regressor.intercept_)
+    scores = _narrow(builder, emit_scores(builder, regressor.transformer_, matrix))
+    product = _affine(builder, scores, regressor.coefficients_.T, regressor.intercept_)
+    return _widen(builder, product)
 
 
 def _emit_perceptron(builder: GraphBuilder, regressor: Any, matrix: str) -> str:
-    values = emit_scores(builder, regressor.transformer_, matrix)
+    values = _narrow(builder, emit_scores(builder, regressor.transformer_, matrix))
     activation = ACTIVATIONS[regressor.activation_]
     *hidden, last = zip(regressor.weights_, regressor.biases_, strict=True)
     for weights, biases in hidden:
         values = builder.node(activation, [_affine(builder, values, weights, biases)])
-    return _affine(builder, values, *last)
+    return _widen(builder, _affine(builder, values, *last))
 
 
 def _emit_forest(builder: GraphBuilder, regressor: Any, matrix: str) -> str:

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 from onnx import ModelProto, checker, shape_inference
 
 from learnclosure import __version__
+from learnclosure.closures.pointwise import flagged
 from learnclosure.export.builder import GraphBuilder
 from learnclosure.export.emitters import emit_regressor
 from learnclosure.export.trace import Traced, TracingNamespace
@@ -23,11 +24,14 @@ def _note(quantity: Quantity) -> str:
     return f"{quantity.long_name} [{quantity.units}]"
 
 
-def build_graph(closure: Closure, metadata: Mapping[str, str] | None = None) -> ModelProto:
+def build_graph(
+    closure: Closure, metadata: Mapping[str, str] | None = None, *, single: bool = False
+) -> ModelProto:
     """Write a fitted closure as an ONNX graph.
 
     The closure's own ``prepare`` and ``finish`` are traced, so the graph holds the same
     arithmetic in the same order; only the regressor is written by an emitter of its own.
+    Where an input is not finite the outputs are those of ``pointwise.flagged``.
 
     Parameters
     ----------
@@ -35,6 +39,10 @@ def build_graph(closure: Closure, metadata: Mapping[str, str] | None = None) -> 
         Fitted.
     metadata : mapping of str to str, optional
         Further properties of the model, such as the version of the bundle.
+    single : bool, optional
+        Whether the products of linear maps and networks are taken in single precision.
+        Features, trees, constraints, trust and half-widths stay in double, and so do inputs
+        and outputs.
 
     Returns
     -------
@@ -48,7 +56,7 @@ def build_graph(closure: Closure, metadata: Mapping[str, str] | None = None) -> 
     BundleError
         If no emitter knows the closure's regressor.
     """
-    builder = GraphBuilder()
+    builder = GraphBuilder(single=single)
     xp = TracingNamespace(builder)
     inputs = {
         name: Traced(builder, builder.input(name, _note(INPUTS[name]))) for name in closure.inputs_
@@ -64,7 +72,8 @@ def build_graph(closure: Closure, metadata: Mapping[str, str] | None = None) -> 
     raw = builder.nodes(
         "Split", [emit_regressor(builder, closure.regressor_, matrix)], 4, axis=1, num_outputs=4
     )
-    outputs = closure.finish(xp, [Traced(builder, name) for name in raw], prepared, inputs)
+    made = closure.finish(xp, [Traced(builder, name) for name in raw], prepared, inputs)
+    outputs = flagged(xp, list(inputs.values()), made, closure.settings.floor)
     values = (*outputs.tensor, *outputs.half_width, outputs.trust)
     for quantity, value in zip(OUTPUTS.values(), values, strict=True):
         builder.output(quantity.name, column(value).name, _note(quantity))

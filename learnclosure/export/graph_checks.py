@@ -1,20 +1,22 @@
 """What a graph must satisfy before any runtime is allowed to see it.
 
 Public runtimes refuse some hostile graphs, but not endless loops, allocations without
-bound or data beside the file. So only a closed list of operators, attributes and types
-passes here, without subgraphs, functions or external data, with finite constants and
-sound trees, and with a known number of values per point for everything computed.
+bound or data beside the file. So only a closed list of fields, operators, attributes and
+types passes here, with finite constants and sound trees, and with a known number of values
+and operations per point for everything computed.
 """
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Callable, Iterator
+from dataclasses import dataclass, field
 
 import numpy as np
-from onnx import AttributeProto, ModelProto, TensorProto, checker, shape_inference
+from onnx import AttributeProto, ModelProto, NodeProto, TensorProto, checker, shape_inference
 from onnx import numpy_helper as tensors
 
-from learnclosure.export.checks import Check, RefusalError
+from learnclosure.export.checks import Check, RefusalError, attempt
 from learnclosure.export.operators import (
     BATCH,
     IR_VERSION,
@@ -23,25 +25,49 @@ from learnclosure.export.operators import (
     OPERATORS,
     OPSET,
 )
-from learnclosure.export.tree_checks import check_trees
+from learnclosure.export.tree_checks import check_gathers, check_trees
+from learnclosure.export.wire import scan_graph
 
-LARGEST_NODES = 20_000
 LARGEST_VALUES = 8_192
 """Most numbers one computed value may hold for each point."""
 LARGEST_TOTAL = 131_072
 """Most numbers all computed values together may hold for each point."""
+LARGEST_WORK = 1 << 24
+"""Most multiplications, additions and comparisons for each point."""
 ATTRIBUTE_TYPES = (AttributeProto.INT, AttributeProto.INTS, AttributeProto.TENSOR)
 CONSTANT_TYPES = (TensorProto.DOUBLE, TensorProto.INT64, TensorProto.UINT8)
 CAST_TYPES = (TensorProto.DOUBLE, TensorProto.FLOAT, TensorProto.INT64)
 VALUE_TYPES = (*CAST_TYPES, TensorProto.BOOL)
 
+Shape = list[int | str]
 
-def inspect_graph(content: bytes) -> tuple[ModelProto | None, list[Check]]:
+
+@dataclass
+class _Subject:
+    """A graph under inspection.
+
+    Attributes
+    ----------
+    model : onnx.ModelProto
+    constant_types : tuple of int
+        Types its constants may have.
+    shapes : dict of str to list
+        Shape of every value, once types and shapes were checked.
+    """
+
+    model: ModelProto
+    constant_types: tuple[int, ...]
+    shapes: dict[str, Shape] = field(default_factory=dict)
+
+
+def inspect_graph(content: bytes, *, single: bool = False) -> tuple[ModelProto | None, list[Check]]:
     """Check a serialised graph without running it.
 
     Parameters
     ----------
     content : bytes
+    single : bool, optional
+        Whether constants in single precision are allowed.
 
     Returns
     -------
@@ -50,67 +76,54 @@ def inspect_graph(content: bytes) -> tuple[ModelProto | None, list[Check]]:
     checks : list of Check
         Those made, up to the first that failed.
     """
-    try:
-        model = ModelProto.FromString(content)
-    except Exception:  # protobuf's own class of error carries no types
-        return None, [Check("graph format", False, "not an ONNX model")]
-    steps: list[tuple[str, Callable[[ModelProto], str]]] = [
-        ("graph format", _check_format),
-        ("graph operators", _check_operators),
-        ("graph constants", _check_constants),
-        ("graph connections", _check_connections),
-        ("graph shapes", _check_shapes),
-        ("graph trees", _check_trees),
-    ]
-    checks: list[Check] = []
-    for name, step in steps:
-        try:
-            checks.append(Check(name, True, step(model)))
-        except RefusalError as refusal:
-            return None, [*checks, Check(name, False, str(refusal))]
-    return model, checks
+    checks = [attempt("graph bytes", lambda: scan_graph(content))]
+    if not checks[0].passed:
+        return None, checks
+    types = (*CONSTANT_TYPES, TensorProto.FLOAT) if single else CONSTANT_TYPES
+    subject = _Subject(ModelProto.FromString(content), types)
+    for name, step in STEPS.items():
+        checks.append(attempt(name, lambda step=step: step(subject)))  # type: ignore[misc]
+        if not checks[-1].passed:
+            return None, checks
+    return subject.model, checks
 
 
-def _check_format(model: ModelProto) -> str:
+def _check_format(subject: _Subject) -> str:
+    model = subject.model
     if model.ir_version != IR_VERSION:
-        raise RefusalError(f"IR version {model.ir_version}, not {IR_VERSION}")
+        raise RefusalError("graph-versions", f"IR version {model.ir_version}, not {IR_VERSION}")
     imports = sorted((entry.domain, entry.version) for entry in model.opset_import)
     if imports != [("", OPSET), (ML_DOMAIN, ML_OPSET)]:
-        raise RefusalError(f"operator sets {imports}")
+        raise RefusalError("graph-versions", f"operator sets {imports}")
+    for key, count in Counter(entry.key for entry in model.metadata_props).items():
+        if count > 1:
+            raise RefusalError("metadata-keys", f"key {key!r} stands {count} times")
     graph = model.graph
-    for what, present in (
-        ("functions", model.functions),
-        ("training information", model.training_info),
-        ("sparse constants", graph.sparse_initializer),
-        ("quantisation", graph.quantization_annotation),
-        ("declared shapes of inner values", graph.value_info),
-    ):
-        if present:
-            raise RefusalError(f"holds {what}")
-    if not graph.input or not graph.output or not 0 < len(graph.node) <= LARGEST_NODES:
-        raise RefusalError(f"{len(graph.node)} nodes")
+    if not graph.input or not graph.output or not graph.node:
+        raise RefusalError("graph-interface", f"{len(graph.node)} nodes")
     for value in (*graph.input, *graph.output):
-        if not value.type.HasField("tensor_type"):
-            raise RefusalError(f"{value.name} is not an array")
         kind = value.type.tensor_type
         dims = [dim.dim_param or dim.dim_value for dim in kind.shape.dim]
         if kind.elem_type != TensorProto.DOUBLE or dims != [BATCH, 1]:
-            raise RefusalError(f"{value.name} is not a double of shape ({BATCH}, 1)")
+            raise RefusalError(
+                "graph-interface", f"{value.name} is not a double of shape ({BATCH}, 1)"
+            )
     return f"{len(graph.node)} nodes, IR {IR_VERSION}, operator sets {OPSET} and {ML_OPSET}"
 
 
-def _check_operators(model: ModelProto) -> str:
-    for node in model.graph.node:
+def _check_operators(subject: _Subject) -> str:
+    nodes = subject.model.graph.node
+    for node in nodes:
         allowed = OPERATORS.get((node.domain, node.op_type))
-        if allowed is None or node.overload:
-            raise RefusalError(f"operator {node.domain or 'onnx'}.{node.op_type} is not allowed")
+        if allowed is None:
+            operator = f"{node.domain or 'onnx'}.{node.op_type}"
+            raise RefusalError("operators", f"operator {operator} is not allowed")
         for attribute in node.attribute:
-            known = attribute.name in allowed and attribute.type in ATTRIBUTE_TYPES
-            if not known or attribute.ref_attr_name:
-                raise RefusalError(f"{node.op_type} with attribute {attribute.name}")
+            if attribute.name not in allowed or attribute.type not in ATTRIBUTE_TYPES:
+                raise RefusalError("attributes", f"{node.op_type} with attribute {attribute.name}")
             if node.op_type == "Cast" and attribute.i not in CAST_TYPES:
-                raise RefusalError(f"Cast to type {attribute.i}")
-    kinds = {node.op_type for node in model.graph.node}
+                raise RefusalError("cast-types", f"Cast to type {attribute.i}")
+    kinds = {node.op_type for node in nodes}
     return f"{len(kinds)} kinds, all on the closed list"
 
 
@@ -122,87 +135,120 @@ def _constants(model: ModelProto) -> Iterator[TensorProto]:
                 yield attribute.t
 
 
-def _check_constants(model: ModelProto) -> str:
+def _check_constants(subject: _Subject) -> str:
     count = 0
-    for tensor in _constants(model):
+    for tensor in _constants(subject.model):
         label = tensor.name or "a constant"
-        if tensor.external_data or tensor.data_location != TensorProto.DEFAULT:
-            raise RefusalError(f"{label} lies outside the file")
-        if tensor.data_type not in CONSTANT_TYPES or tensor.HasField("segment"):
-            raise RefusalError(f"{label} has type {tensor.data_type}")
+        if tensor.data_type not in subject.constant_types:
+            raise RefusalError("constant-types", f"{label} has type {tensor.data_type}")
         try:
             array = tensors.to_array(tensor)
         except (ValueError, TypeError):
-            raise RefusalError(f"{label} does not have the size it declares") from None
+            raise RefusalError(
+                "constant-sizes", f"{label} does not have the size it declares"
+            ) from None
         if not np.isfinite(array).all():
-            raise RefusalError(f"{label} holds values that are not finite")
+            raise RefusalError("finite-weights", f"{label} holds values that are not finite")
         count += array.size
     return f"{count} numbers, all finite and inside the file"
 
 
-def _check_connections(model: ModelProto) -> str:
-    graph = model.graph
+def _check_connections(subject: _Subject) -> str:
+    graph = subject.model.graph
     first = [*(value.name for value in graph.input), *(tensor.name for tensor in graph.initializer)]
     known = set(first)
     if len(known) != len(first) or "" in known:
-        raise RefusalError("two inputs or constants share a name")
+        raise RefusalError("names", "two inputs or constants share a name")
     for node in graph.node:
         for name in node.input:
             if name not in known:
-                raise RefusalError(f"{node.op_type} takes {name!r}, which is not there yet")
+                raise RefusalError(
+                    "order", f"{node.op_type} takes {name!r}, which is not there yet"
+                )
         for name in node.output:
             if name in known or not name:
-                raise RefusalError(f"{node.op_type} gives {name!r}, which is there already")
+                raise RefusalError(
+                    "names", f"{node.op_type} gives {name!r}, which is there already"
+                )
             known.add(name)
     for value in graph.output:
         if value.name not in known:
-            raise RefusalError(f"nothing gives the output {value.name}")
+            raise RefusalError("order", f"nothing gives the output {value.name}")
     return f"{len(known)} values, each made once"
 
 
-def _inferred(model: ModelProto) -> dict[str, list[int | str]]:
+def _inferred(model: ModelProto) -> dict[str, Shape]:
     """Return the shape of every value after checking types and shapes."""
     try:
         checker.check_model(model, full_check=True)
         graph = shape_inference.infer_shapes(model, check_type=True, strict_mode=True).graph
     except (checker.ValidationError, shape_inference.InferenceError, ValueError) as error:
-        raise RefusalError(str(error).strip().splitlines()[0]) from None
-    shapes: dict[str, list[int | str]] = {
+        raise RefusalError("types-and-shapes", str(error).strip().splitlines()[0]) from None
+    shapes: dict[str, Shape] = {
         tensor.name: list(tensor.dims) for tensor in model.graph.initializer
     }
     for value in (*graph.input, *graph.value_info, *graph.output):
         kind = value.type.tensor_type
         if kind.elem_type not in VALUE_TYPES:
-            raise RefusalError(f"{value.name} has type {kind.elem_type}")
+            raise RefusalError("types-and-shapes", f"{value.name} has type {kind.elem_type}")
         shapes[value.name] = [dim.dim_param or dim.dim_value for dim in kind.shape.dim]
     return shapes
 
 
-def _check_shapes(model: ModelProto) -> str:
-    shapes = _inferred(model)
-    total = 0
-    for node in model.graph.node:
+def _check_shapes(subject: _Subject) -> str:
+    subject.shapes = _inferred(subject.model)
+    total = work = 0
+    for node in subject.model.graph.node:
+        made = 0
         for name in node.output:
             size = 1
-            dims = shapes.get(name, [])
+            dims = subject.shapes.get(name, [])
             for dim in dims[1:]:
                 size *= dim if isinstance(dim, int) else 0
             if not dims or dims[0] != BATCH or not 0 < size <= LARGEST_VALUES:
-                raise RefusalError(f"{name} has shape {dims}")
-            total += size
+                raise RefusalError("value-sizes", f"{name} has shape {dims}")
+            made += size
+        total += made
+        work += made * _work(node, subject.shapes)
     if total > LARGEST_TOTAL:
-        raise RefusalError(f"{total} numbers for each point")
-    return f"{total} numbers for each point"
+        raise RefusalError("value-sizes", f"{total} numbers for each point")
+    if work > LARGEST_WORK:
+        raise RefusalError("work", f"{work} operations for each point, at most {LARGEST_WORK}")
+    return f"{total} numbers and {work} operations for each point"
 
 
-def _check_trees(model: ModelProto) -> str:
-    shapes = _inferred(model)
+def _work(node: NodeProto, shapes: dict[str, Shape]) -> int:
+    """Return an upper bound of the operations behind one number a node gives."""
+    if node.op_type in {"MatMul", "ReduceSum"}:
+        dims = shapes[node.input[0]]
+        sizes = [dim if isinstance(dim, int) else 1 for dim in dims]
+        # A product sums over the last axis; a sum may run over all of them.
+        return (
+            sizes[-1] if node.op_type == "MatMul" and sizes else int(np.prod(sizes, dtype=object))
+        )
+    if node.op_type == "TreeEnsemble":
+        return max(len(attribute.ints) for attribute in node.attribute)
+    return 1
+
+
+def _check_trees(subject: _Subject) -> str:
     count = 0
-    for node in model.graph.node:
+    for node in subject.model.graph.node:
         if node.op_type == "TreeEnsemble":
-            dims = shapes[node.input[0]]
+            dims = subject.shapes[node.input[0]]
             features = dims[-1]
             if len(dims) != 2 or not isinstance(features, int):
-                raise RefusalError(f"{node.name} takes an array of shape {dims}")
+                raise RefusalError("tree-form", f"{node.name} takes an array of shape {dims}")
             count += check_trees(node, features)
-    return f"{count} trees, all indices in range"
+    tables = check_gathers(subject.model)
+    return f"{count} trees and {tables} tables, all indices in range"
+
+
+STEPS: dict[str, Callable[[_Subject], str]] = {
+    "graph format": _check_format,
+    "graph operators": _check_operators,
+    "graph constants": _check_constants,
+    "graph connections": _check_connections,
+    "graph shapes": _check_shapes,
+    "graph trees": _check_trees,
+}

@@ -3,27 +3,37 @@
 from __future__ import annotations
 
 import hashlib
-from collections.abc import Mapping
+import os
+import stat
+from collections.abc import Iterable, Mapping
 from pathlib import Path
 
 from learnclosure.errors import BundleError
+from learnclosure.export.checks import RefusalError
 
 SCHEMA = "1"
 
 GRAPH_FILE = "closure.onnx"
+SINGLE_FILE = "closure_float32.onnx"
 MANIFEST_FILE = "manifest.json"
 REFERENCE_FILE = "reference.nc"
 CARD_FILE = "MODEL_CARD.md"
 SUMS_FILE = "SHA256SUMS"
+SIGNATURE_FILE = "SHA256SUMS.sig"
 
 LARGEST_SIZES = {
     CARD_FILE: 1 << 20,
     SUMS_FILE: 4096,
-    GRAPH_FILE: 128 << 20,
-    MANIFEST_FILE: 16 << 20,
-    REFERENCE_FILE: 256 << 20,
+    GRAPH_FILE: 32 << 20,
+    MANIFEST_FILE: 4 << 20,
+    REFERENCE_FILE: 64 << 20,
 }
-"""Every file of a bundle and the most bytes a receiver reads of it."""
+"""Every file a bundle must have and the most bytes a receiver reads of it."""
+OPTIONAL_SIZES = {SINGLE_FILE: 32 << 20, SIGNATURE_FILE: 1 << 16}
+"""Files a bundle may have as well."""
+ALL_SIZES = {**LARGEST_SIZES, **OPTIONAL_SIZES}
+UNSUMMED = (SUMS_FILE, SIGNATURE_FILE)
+"""Files without a line in the sums: the sums themselves, and what signs them."""
 
 
 def digest(content: bytes) -> str:
@@ -51,34 +61,60 @@ def sums_text(files: Mapping[str, bytes]) -> bytes:
     Returns
     -------
     bytes
-        One line for each file but the sums themselves, sorted by name.
+        One line for each file but the sums themselves and their signature, sorted by name.
     """
-    names = sorted(name for name in files if name != SUMS_FILE)
+    names = sorted(name for name in files if name not in UNSUMMED)
     return "".join(f"{digest(files[name])}  {name}\n" for name in names).encode()
 
 
-def require_bundle(folder: Path) -> None:
-    """Insist that a folder is a bundle at all.
+def check_names(found: Iterable[str]) -> None:
+    """Insist on all required files and none but the optional ones.
 
     Parameters
     ----------
-    folder : Path
+    found : iterable of str
+        Names of files.
+
+    Raises
+    ------
+    RefusalError
+    """
+    names = set(found)
+    missing = sorted(set(LARGEST_SIZES) - names)
+    foreign = sorted(names - set(ALL_SIZES))
+    parts = [f"missing {', '.join(missing)}"] if missing else []
+    parts += [f"unexpected {', '.join(foreign[:5])}"] if foreign else []
+    if parts:
+        raise RefusalError("file-list", "; ".join(parts))
+
+
+def require_bundle(place: Path) -> None:
+    """Insist that a path is a bundle at all.
+
+    Parameters
+    ----------
+    place : Path
+        A folder with a manifest, or a file, which is taken for an archive.
 
     Raises
     ------
     BundleError
-        If it is no folder or has no manifest.
+        If it is neither.
     """
-    remedy = "give the folder that 'learnclosure export' wrote"
-    if not folder.is_dir():
-        raise BundleError("is not a folder", where=folder, expected="a bundle", remedy=remedy)
-    if not (folder / MANIFEST_FILE).is_file():
+    remedy = "give the folder or archive that 'learnclosure export' wrote"
+    if place.is_file():
+        return
+    if not place.is_dir():
         raise BundleError(
-            "is not a bundle", where=folder, expected=f"a file {MANIFEST_FILE}", remedy=remedy
+            "is not a folder or archive", where=place, expected="a bundle", remedy=remedy
+        )
+    if not (place / MANIFEST_FILE).is_file():
+        raise BundleError(
+            "is not a bundle", where=place, expected=f"a file {MANIFEST_FILE}", remedy=remedy
         )
 
 
-def read_files(folder: Path) -> tuple[dict[str, bytes], str | None]:
+def read_folder(folder: Path) -> dict[str, bytes]:
     """Read the files of a bundle once, within the sizes a receiver accepts.
 
     Parameters
@@ -87,36 +123,41 @@ def read_files(folder: Path) -> tuple[dict[str, bytes], str | None]:
 
     Returns
     -------
-    files : dict of str to bytes
-    problem : str or None
-        What is missing, foreign, linked or too large; then nothing was read.
+    dict of str to bytes
 
     Raises
     ------
+    RefusalError
+        If a file is missing, foreign, not a plain file or too large.
     BundleError
         If a file cannot be read.
     """
     try:
-        found = sorted(path.name for path in folder.iterdir())
-        if found != sorted(LARGEST_SIZES):
-            missing = sorted(set(LARGEST_SIZES) - set(found))
-            foreign = sorted(set(found) - set(LARGEST_SIZES))
-            parts = [f"missing {', '.join(missing)}"] if missing else []
-            parts += [f"unexpected {', '.join(foreign)}"] if foreign else []
-            return {}, "; ".join(parts)
-        files: dict[str, bytes] = {}
-        for name, largest in LARGEST_SIZES.items():
-            path = folder / name
-            if path.is_symlink() or not path.is_file():
-                return {}, f"{name} is not a plain file"
-            with path.open("rb") as stream:
-                files[name] = stream.read(largest + 1)
-            if len(files[name]) > largest:
-                return {}, f"{name} is larger than {largest} bytes"
+        with os.scandir(folder) as entries:
+            # One more than can be right is enough to know that something is wrong.
+            found = [
+                entry.name for _, entry in zip(range(len(ALL_SIZES) + 1), entries, strict=False)
+            ]
+        check_names(found)
+        return {name: _read_plain(folder / name, ALL_SIZES[name]) for name in sorted(found)}
     except OSError as error:
         raise BundleError(
             f"cannot be read: {error.strerror}",
             where=folder,
             remedy="check the permissions of the bundle",
         ) from None
-    return files, None
+
+
+def _read_plain(path: Path, largest: int) -> bytes:
+    if path.is_symlink():
+        raise RefusalError("file-kind", f"{path.name} is not a plain file")
+    # A pipe would be waited for without the first flag; a link made meanwhile be followed
+    # without the second.
+    handle = os.open(path, os.O_RDONLY | os.O_NONBLOCK | os.O_NOFOLLOW)
+    with os.fdopen(handle, "rb") as stream:
+        if not stat.S_ISREG(os.fstat(handle).st_mode):
+            raise RefusalError("file-kind", f"{path.name} is not a plain file")
+        content = stream.read(largest + 1)
+    if len(content) > largest:
+        raise RefusalError("file-size", f"{path.name} is larger than {largest} bytes")
+    return content

@@ -6,9 +6,10 @@ import json
 from collections.abc import Mapping
 from typing import TYPE_CHECKING, Any
 
+from learnclosure import __version__
 from learnclosure.export.graph import TENSOR_CONVENTION
-from learnclosure.export.layout import CARD_FILE, GRAPH_FILE, REFERENCE_FILE, SCHEMA
-from learnclosure.export.operators import IR_VERSION, ML_DOMAIN, ML_OPSET, OPSET
+from learnclosure.export.layout import CARD_FILE, GRAPH_FILE, REFERENCE_FILE, SCHEMA, SUMS_FILE
+from learnclosure.export.operators import BATCH, IR_VERSION, ML_DOMAIN, ML_OPSET, OPSET
 from learnclosure.export.reference import AGREEMENT_LIMIT
 from learnclosure.quantities import FEATURES, INPUTS, OUTPUTS, Quantity
 
@@ -24,7 +25,8 @@ CONVENTIONS = {
     "axes": "components along the model's own axes; y is x turned anticlockwise by a right angle",
     "layers": "from the top down; layer_index 0 is the uppermost",
     "units": "SI in and out",
-    "land": "leave land out; every input must be finite",
+    "land": "leave land out; where an input is not finite the graph gives the floor, no half-width "
+    "(1e30) and trust 0",
 }
 
 
@@ -55,6 +57,10 @@ def describe(quantity: Quantity) -> dict[str, Any]:
     }
 
 
+def _describe_column(quantity: Quantity) -> dict[str, Any]:
+    return describe(quantity) | {"shape": [BATCH, 1]}
+
+
 def make_manifest(
     closure: Closure,
     settings: ExportSettings,
@@ -64,6 +70,7 @@ def make_manifest(
     reference_inputs: Mapping[str, npt.NDArray[np.float64]],
     points: int,
     agreement: Mapping[str, float],
+    single: Mapping[str, Any] | None = None,
 ) -> dict[str, Any]:
     """Put together the manifest of a bundle.
 
@@ -81,6 +88,8 @@ def make_manifest(
         Points in ``reference.nc``.
     agreement : mapping of str to float
         Largest difference found between evaluations, over the spread of the output.
+    single : mapping, optional
+        What is said of the variant in single precision, if one ships.
 
     Returns
     -------
@@ -94,6 +103,7 @@ def make_manifest(
         "name": f"learnclosure-{closure.family}",
         "version": settings.version,
         "licence": settings.licence,
+        "citation": settings.citation or default_citation(closure.family, settings.version),
         "family": closure.family,
         "regressor": closure.regressor,
         "target": closure.target,
@@ -107,7 +117,7 @@ def make_manifest(
             "dtype": "float64",
         },
         "inputs": [
-            describe(INPUTS[name])
+            _describe_column(INPUTS[name])
             | {
                 "range_in_regions": [
                     float(reference_inputs[name].min()),
@@ -116,7 +126,7 @@ def make_manifest(
             }
             for name in closure.inputs_
         ],
-        "outputs": [describe(row) for row in OUTPUTS.values()],
+        "outputs": [_describe_column(row) for row in OUTPUTS.values()],
         "features": [
             describe(FEATURES[name]) | {"trained_range": list(ranges[name])}
             for name in closure.feature_names_
@@ -136,10 +146,34 @@ def make_manifest(
         "half_width": None if half_widths is None else half_widths.as_record(),
         "training": dict(provenance),
         "evaluation": family_evaluation(closure.family, evaluation),
-        "reference": {"file": REFERENCE_FILE, "points": points, "limit": AGREEMENT_LIMIT},
+        "reference": {
+            "file": REFERENCE_FILE,
+            "points": points,
+            "region_points": len(next(iter(reference_inputs.values()))),
+            "limit": AGREEMENT_LIMIT,
+        },
+        "single_precision": None if single is None else dict(single),
         "agreement": dict(agreement),
         "card": CARD_FILE,
     }
+
+
+def default_citation(family: str, version: str) -> str:
+    """Return how to cite a bundle whose author has not said how.
+
+    Parameters
+    ----------
+    family, version : str
+
+    Returns
+    -------
+    str
+    """
+    return (
+        f"learnclosure-{family} {version}, a mesoscale eddy closure made with learnclosure "
+        f"{__version__}; cite it by this name, its version and the SHA-256 of its {SUMS_FILE}, "
+        "and the ensembles it was trained on"
+    )
 
 
 def family_evaluation(family: str, evaluation: Mapping[str, Any]) -> dict[str, Any]:

@@ -11,8 +11,8 @@ import numpy.typing as npt
 
 from learnclosure.closures.points import checked_inputs
 from learnclosure.errors import BundleError, InputError, RoleError
-from learnclosure.export.gate import Contents, inspect_bundle
-from learnclosure.export.layout import GRAPH_FILE, MANIFEST_FILE, digest
+from learnclosure.export.gate import Contents, load_bundle
+from learnclosure.export.layout import GRAPH_FILE, MANIFEST_FILE, SINGLE_FILE, digest
 from learnclosure.export.mean_fields import read_mean_fields, write_predictions
 from learnclosure.export.runtime import open_session, run_session
 from learnclosure.features.inputs import compute_inputs
@@ -22,7 +22,13 @@ FloatArray = npt.NDArray[np.float64]
 
 
 class Predictor:
-    """A closure ready to run, from a bundle that passed the gate's static checks.
+    """A closure ready to run, from a bundle that passed the gate.
+
+    Parameters
+    ----------
+    contents : Contents
+    single : bool, optional
+        Whether to run the variant in single precision.
 
     Attributes
     ----------
@@ -32,13 +38,13 @@ class Predictor:
         Names of physical inputs and of outputs, in order.
     """
 
-    def __init__(self, contents: Contents) -> None:
+    def __init__(self, contents: Contents, *, single: bool = False) -> None:
         graph = contents.model.graph
         self.manifest = contents.manifest
         self.manifest_digest = digest(contents.files[MANIFEST_FILE])
         self.inputs = tuple(value.name for value in graph.input)
         self.outputs = tuple(value.name for value in graph.output)
-        self._session = open_session(contents.files[GRAPH_FILE])
+        self._session = open_session(contents.files[SINGLE_FILE if single else GRAPH_FILE])
 
     @property
     def uses_energy(self) -> bool:
@@ -85,12 +91,19 @@ class Predictor:
         return {name: values.reshape(shape) for name, values in found.items()}
 
 
-def load_predictor(folder: str | Path) -> Predictor:
-    """Load a bundle after the gate's static checks.
+def load_predictor(
+    folder: str | Path, *, single: bool = False, signers: str | Path | None = None
+) -> Predictor:
+    """Load a bundle that passes the gate.
 
     Parameters
     ----------
     folder : str or Path
+        Folder or archive.
+    single : bool, optional
+        Whether to run the variant in single precision, whose tolerance the manifest states.
+    signers : str or Path, optional
+        File of allowed signers; if given, the bundle must be signed by one of them.
 
     Returns
     -------
@@ -99,27 +112,32 @@ def load_predictor(folder: str | Path) -> Predictor:
     Raises
     ------
     BundleError
-        If the folder is not a bundle or a check failed.
+        If the path is not a bundle, a check failed, or there is no such variant.
     """
-    place = Path(folder)
-    checks, contents = inspect_bundle(place)
-    if contents is None:
-        failed = next(check for check in checks if not check.passed)
+    contents = load_bundle(folder, signers=signers)
+    if single and SINGLE_FILE not in contents.files:
         raise BundleError(
-            f"the check of {failed.name} failed: {failed.found}",
-            where=place,
-            remedy="do not load it; ask its author for an intact copy",
+            "has no variant in single precision",
+            where=folder,
+            remedy="run it in double precision",
         )
-    return Predictor(contents)
+    return Predictor(contents, single=single)
 
 
-def predict_file(bundle: str | Path, source: str | Path, target: str | Path) -> None:
+def predict_file(
+    bundle: str | Path,
+    source: str | Path,
+    target: str | Path,
+    *,
+    single: bool = False,
+    signers: str | Path | None = None,
+) -> None:
     """Apply a bundle to a file of mean fields.
 
     Parameters
     ----------
     bundle : str or Path
-        Folder of the bundle.
+        Folder or archive of the bundle.
     source : str or Path
         NetCDF file with the variables of ``quantities.MEAN_STATE`` in SI units, such as
         a ``statistics.nc``, and a global attribute ``periodic`` that names the periodic
@@ -127,6 +145,8 @@ def predict_file(bundle: str | Path, source: str | Path, target: str | Path) -> 
     target : str or Path
         NetCDF file to write: tensor, half-widths and trust on the grid of the source,
         missing on land.
+    single, signers
+        As for ``load_predictor``.
 
     Raises
     ------
@@ -139,7 +159,7 @@ def predict_file(bundle: str | Path, source: str | Path, target: str | Path) -> 
     OutputError
         If the target cannot be written.
     """
-    predictor = load_predictor(bundle)
+    predictor = load_predictor(bundle, single=single, signers=signers)
     fields = read_mean_fields(Path(source), energy=predictor.uses_energy)
     mask = fields.state.geometry.mask
     if not mask.any():

@@ -10,13 +10,17 @@ import xarray as xr
 from learnclosure.atomic import atomic_path
 from learnclosure.features.inputs import compute_inputs, input_flags
 from learnclosure.features.mean_state import MeanState
-from learnclosure.features.point_features import point_features
+from learnclosure.features.point_features import EVERY_GROUP, point_features
 from learnclosure.quantities import FEATURES, INPUTS, Quantity
 
 
 def _annotated(values: np.ndarray, quantity: Quantity) -> xr.Variable:
     attributes = quantity.attributes()
     attributes["parity"] = quantity.parity
+    if quantity.topic:
+        attributes["feature_group"] = quantity.topic
+    if quantity.validity:
+        attributes["comment"] = quantity.validity
     attributes["locality"] = quantity.locality
     if quantity.source:
         attributes["references"] = quantity.source
@@ -34,13 +38,16 @@ def features_dataset(statistics: xr.Dataset) -> xr.Dataset:
     Returns
     -------
     xarray.Dataset
-        Every input, feature and flag on (layer, y, x); NaN on land.
+        Every input, feature and flag on (layer, y, x); NaN on land. Vectors stand in the
+        frame of the potential vorticity gradient.
     """
     arrays = {str(name): np.asarray(statistics[name].values) for name in statistics.variables}
     state = MeanState.from_mapping(arrays, dict(statistics.attrs))
     inputs = compute_inputs(state)
     energy = state.eddy_kinetic_energy is not None
-    features = point_features(np, inputs, energy)
+    features = point_features(np, inputs, False, EVERY_GROUP)
+    if energy:
+        features |= point_features(np, inputs, True, EVERY_GROUP)
     wet = state.geometry.mask
     variables: dict[str, xr.Variable] = {}
     for table, fields in ((INPUTS, inputs), (FEATURES, features)):
@@ -59,6 +66,7 @@ def features_dataset(statistics: xr.Dataset) -> xr.Dataset:
         )
     kept = ("Conventions", "region", "split", "vertical", "periodic")
     attributes = {key: statistics.attrs[key] for key in kept if key in statistics.attrs}
+    attributes["frame"] = "pv-gradient"
     attributes["title"] = f"mean-flow features of the region {statistics.attrs.get('region', '')}"
     coordinates = {name: statistics[name].variable for name in ("layer", "y", "x")}
     return xr.Dataset(variables, coordinates, attributes)

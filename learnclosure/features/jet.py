@@ -1,4 +1,8 @@
-"""Where the jet is, how wide and how fast, and how far each column is from its axis."""
+"""Where the jet is, how wide and how fast, and how far each column is from its axis.
+
+Found section by section, which takes one jet that keeps its direction; for meanders that
+turn back and for several jets see ``learnclosure.features.beside_jet``.
+"""
 
 from __future__ import annotations
 

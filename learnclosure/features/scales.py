@@ -63,8 +63,24 @@ def rhines_length(xp: Any, inputs: Mapping[str, Any]) -> Any:
     Rhines 1975, J. Fluid Mech. 69, 417-443.
     """
     speed = eddy_speed(xp, inputs["eddy_kinetic_energy_column"])
-    beta = xp.maximum(planetary_beta(xp, inputs), LEAST_BETA)
-    return xp.minimum(xp.sqrt(speed / beta), LONGEST_RHINES_LENGTH)
+    return rhines_length_of(xp, speed, planetary_beta(xp, inputs))
+
+
+def rhines_length_of(xp: Any, speed: Any, beta: Any) -> Any:
+    """Rhines length ``sqrt(U/beta)`` of a speed.
+
+    Parameters
+    ----------
+    xp : namespace
+    speed : array, m s-1
+    beta : array, m-1 s-1
+
+    Returns
+    -------
+    array, m
+        At most 500 km, which also stands where beta vanishes.
+    """
+    return xp.minimum(xp.sqrt(speed / xp.maximum(beta, LEAST_BETA)), LONGEST_RHINES_LENGTH)
 
 
 def tensor_scale(xp: Any, inputs: Mapping[str, Any], family: str) -> Any:

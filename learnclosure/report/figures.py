@@ -50,7 +50,8 @@ class Picture:
     caption: str
 
 
-def _picture(figure: Figure, text: str, caption: str) -> Picture:
+def as_picture(figure: Figure, text: str, caption: str) -> Picture:
+    """Turn a figure into an inline picture with its words."""
     buffer = io.BytesIO()
     FigureCanvasAgg(figure)
     figure.savefig(buffer, format="png", dpi=110, metadata={"Software": None})
@@ -178,7 +179,7 @@ def tensor_maps(region: str, statistics: xr.Dataset) -> Picture:
             figure.colorbar(image, ax=list(axes[row]), shrink=0.85, label="m2 s-1", extend="max")
             row += 1
         _label_axes(axes)
-        return _picture(
+        return as_picture(
             figure,
             f"Maps of the symmetric components and alpha of the transport tensor of {region}",
             f"Transport tensor of {region} as diagnosed from all members"
@@ -224,7 +225,7 @@ def prediction_maps(
                      title="minus diagnosed")  # fmt: skip
             figure.colorbar(image, ax=list(row), shrink=0.85, label="m2 s-1", extend="both")
         _label_axes(axes)
-        return _picture(
+        return as_picture(
             figure,
             f"Maps of {part} of {region}, diagnosed and predicted by each family",
             f"{part} of {region}: diagnosed, predicted, and predicted minus diagnosed. "
@@ -290,7 +291,7 @@ def flux_maps(
                 _scatter(row[2 + 2 * number], true[:, layer], guess[:, layer])
             figure.colorbar(image, ax=list(row), shrink=0.85, label=units, extend="both")
             row[0].set_ylabel("y, km")
-        return _picture(
+        return as_picture(
             figure,
             f"Eddy flux of {tracer} in {region}, true and predicted",
             f"Eddy flux along y of {tracer}, a tracer "
@@ -361,7 +362,7 @@ def score_chart(evaluation: Mapping[str, Any], measure: str, title: str) -> Pict
         known = dict(zip(labels, handles, strict=True))
         figure.legend(known.values(), known.keys(), loc="outside lower center", ncols=4,
                       frameon=False)  # fmt: skip
-        return _picture(
+        return as_picture(
             figure,
             f"Scores of {title} by region and layer for closures, baselines and the ceiling",
             f"R2 of {title}: closures (filled), fitted baselines (hollow) and the tensor of an "
@@ -415,7 +416,7 @@ def trust_map(
                              title=f"{family}, {name}")  # fmt: skip
         figure.colorbar(image, ax=list(axes[0]), shrink=0.85, label="trust")
         _label_axes(axes)
-        return _picture(
+        return as_picture(
             figure,
             f"Maps of trust over {region}",
             f"Trust over {region}: 1 where all inputs are well inside the training sample; where "

@@ -7,6 +7,17 @@ from typing import Any
 
 from learnclosure.report.cautions import CAUTIONS, NOT_FOR
 
+REGIME = (
+    "coriolis_parameter",
+    "deformation_radius",
+    "eady_growth_rate",
+    "charney_green_number",
+    "jet_speed",
+    "jet_width",
+    "eddy_kinetic_energy",
+)
+"""Inputs that tell what a region is like."""
+
 
 def _number(value: Any) -> str:
     return "-" if value is None else f"{value:.2f}" if isinstance(value, float) else str(value)
@@ -29,14 +40,50 @@ def _training(manifest: Mapping[str, Any]) -> str:
             region.get("name", "-"),
             region.get("members", "-"),
             region.get("snapshots", "-"),
+            region.get("layers", "-"),
+            f"{region['cell_width'] / 1e3:.3g}" if "cell_width" in region else "-",
             region.get("eddy_definition", "-"),
             f"`{str(region.get('input_sha256', ''))[:16]}`",
         )
         for region in training.get("regions", [])
     ]
-    text = _table(("region", "members", "snapshots", "eddies", "data SHA-256, first 16"), rows)
+    text = _table(
+        (
+            "region",
+            "members",
+            "snapshots",
+            "layers",
+            "cell, km",
+            "eddies",
+            "data SHA-256, first 16",
+        ),
+        rows,
+    )
     versions = ", ".join(f"{name} {value}" for name, value in training.get("versions", {}).items())
     return f"{text}\n\nSeed {training.get('seed', '-')}. Made with {versions}."
+
+
+def _regime(manifest: Mapping[str, Any]) -> str:
+    """Say in plain numbers what the regions were like."""
+    rows = {row.get("name"): row for row in manifest.get("inputs", [])}
+    lines = []
+    for name in REGIME:
+        low, high = rows.get(name, {}).get("range_in_regions", (None, None))
+        if low is not None and high is not None:
+            row = rows[name]
+            unit = "" if row.get("units") == "1" else f" {row.get('units', '')}"
+            lines.append(f"* {row.get('long_name', name)}: {low:.3g} to {high:.3g}{unit}")
+    return "\n".join(lines) or "No ranges were recorded."
+
+
+def _single(manifest: Mapping[str, Any]) -> str:
+    record = manifest.get("single_precision")
+    if not record:
+        return "There is no variant in single precision."
+    return (
+        f"`{record.get('file', '-')}` takes the products of its regressor in single precision, "
+        f"within {record.get('tolerance', float('nan')):.1e} of the spread of each output."
+    )
 
 
 def _scores(manifest: Mapping[str, Any]) -> str:
@@ -129,13 +176,16 @@ def render_model_card(manifest: Mapping[str, Any]) -> str:
         "A mesoscale eddy closure: from resolved mean fields to the eddy transport tensor K of "
         "`J = -K grad C` (m2 s-1; rows flux, columns gradient), its half-widths and a trust.",
         f"Family `{family}`: a host gives {needs}. Regressor `{manifest.get('regressor', '-')}`, "
-        f"target `{manifest.get('target', '-')}`. Licence {manifest.get('licence', '-')}.",
+        f"target `{manifest.get('target', '-')}`.",
         "## Read this first",
         "\n".join(f"* {text}" for text in CAUTIONS),
         "## Not for",
         "\n".join(f"* {text}" for text in NOT_FOR),
         "## Trained on",
         _training(manifest),
+        "## Regime",
+        "Of all regions, held-out ones included; outside it trust falls and the fallback speaks.",
+        _regime(manifest),
         "## Scores",
         "Coefficients of determination of eddy fluxes of tracers that were never used; training "
         "regions are scored by closures that did not see them.",
@@ -153,8 +203,12 @@ def render_model_card(manifest: Mapping[str, Any]) -> str:
         "## Inputs",
         _inputs(manifest),
         "## Checking and running it",
-        "`learnclosure verify FOLDER` checks sums and graph and recomputes the reference points; "
-        "`learnclosure predict FOLDER IN OUT` applies it to a NetCDF file of mean fields. "
-        "`sha256sum -c SHA256SUMS` checks the files without any of this software.",
+        "`learnclosure verify BUNDLE` checks sums and graph and recomputes the reference points; "
+        "`learnclosure predict BUNDLE IN OUT` applies it to a NetCDF file of mean fields. "
+        "`sha256sum -c SHA256SUMS` checks the files without any of this software. "
+        "Where an input is not finite the graph gives the floor, no half-width and trust 0. "
+        + _single(manifest),
+        "## Licence and citation",
+        f"SPDX: {manifest.get('licence', '-')}. Cite as: {manifest.get('citation', '-')}.",
     ]
     return "\n\n".join(parts) + "\n"

@@ -125,7 +125,9 @@ def degenerate_inputs(sample: Inputs) -> dict[str, FloatArray]:
     dict of str to ndarray, shape (point,)
     """
     few = _take(sample, np.arange(min(8, len(next(iter(sample.values()))))))
-    motion = [name for name in few if "velocity" in name or name.startswith(("shear", "jet"))]
+    motion = [
+        name for name in few if "velocity" in name or name.startswith(("shear", "jet", "axis"))
+    ]
     vanishing = [[name] for name in few] + [list(few), motion]
     cases = []
     for names in vanishing:

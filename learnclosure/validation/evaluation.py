@@ -8,18 +8,18 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 import numpy.typing as npt
 
-from learnclosure.closures.baselines import (
-    Baseline,
-    ConstantPerLayer,
-    EadyVisbeck,
-    EkeMixingLength,
-)
 from learnclosure.closures.closure import Closure
 from learnclosure.closures.table import Table, table_from_statistics
 from learnclosure.errors import TrainingError
 from learnclosure.study import ClosureSettings, ValidationSettings
 from learnclosure.validation.audit import audit
 from learnclosure.validation.audit_inputs import AuditRegion
+from learnclosure.validation.baseline_records import (
+    BOUNDS,
+    baseline_record,
+    bound_record,
+    region_record,
+)
 from learnclosure.validation.folds import Fold, FoldKind, make_folds
 from learnclosure.validation.out_of_fold import (
     Candidate,
@@ -46,87 +46,9 @@ REFITTED: tuple[FoldKind, ...] = ("random", "blocked")
 """Folds whose scores are not known yet from choosing the closure."""
 FITTING_SHARE = 0.8
 
-BASELINES: dict[str, tuple[type[Baseline], bool]] = {
-    "constant": (ConstantPerLayer, False),
-    "eady-visbeck": (EadyVisbeck, False),
-    "eady-visbeck-published": (EadyVisbeck, True),
-    "eke-mixing-length": (EkeMixingLength, False),
-    "eke-mixing-length-published": (EkeMixingLength, True),
-}
-"""Baselines by the name they are reported under, and whether their constant is published."""
-
 
 def _split(statistics: Mapping[str, xr.Dataset], split: str) -> list[xr.Dataset]:
     return [data for data in statistics.values() if str(data.attrs.get("split")) == split]
-
-
-def _baseline_tensor(baseline: Baseline, table: Table) -> FloatArray:
-    parts = baseline.tensor(np, table.inputs)
-    return np.column_stack([np.broadcast_to(part, len(table)) for part in parts])
-
-
-def baseline_record(
-    name: str,
-    table: Table,
-    held_out: Table | None,
-    folds: Mapping[FoldKind, Sequence[Fold]],
-    truths: Mapping[str, FluxTruth],
-) -> Record | None:
-    """Fit one baseline wherever the learned closures are fitted, and score it the same way.
-
-    Parameters
-    ----------
-    name : str
-        Key of ``BASELINES``.
-    table : Table
-        Points of the training regions.
-    held_out : Table or None
-        Points of the test regions.
-    folds : mapping of str to sequence of Fold
-        By kind.
-    truths : mapping of str to FluxTruth
-        For every region.
-
-    Returns
-    -------
-    dict or None
-        None where the regions lack an input it needs.
-    """
-    kind, published = BASELINES[name]
-    tables = [table] if held_out is None else [table, held_out]
-    if any(needed not in part.inputs for part in tables for needed in kind.required):
-        return None
-    out_of_fold: dict[FoldKind, FloatArray] = {}
-    for fold_kind, parts in folds.items():
-        tensor = np.full((len(table), 4), np.nan)
-        for fold in parts:
-            fitted = kind(published=published).fit(table.select(fold.train))
-            tensor[fold.test] = _baseline_tensor(fitted, table.select(fold.test))
-        out_of_fold[fold_kind] = tensor
-    final = kind(published=published).fit(table)
-    regions = {
-        region: _region_record("train", region_scores(table, out_of_fold["region"], truths[region]))
-        for region in table.regions
-    }
-    if held_out is not None:
-        tensor = _baseline_tensor(final, held_out)
-        for region in held_out.regions:
-            regions[region] = _region_record(
-                "test", region_scores(held_out, tensor, truths[region])
-            )
-    return {
-        "family": kind.family,
-        "parameters": final.parameters(),
-        "folds": {
-            fold_kind: pooled_scores(table, tensor, truths)
-            for fold_kind, tensor in out_of_fold.items()
-        },
-        "regions": regions,
-    }
-
-
-def _region_record(split: str, scores: Mapping[str, Any]) -> Record:
-    return {"split": split, "out_of_sample": True, "scores": dict(scores)}
 
 
 def ceiling_record(truth: FluxTruth, statistics: xr.Dataset) -> Record | None:
@@ -158,19 +80,26 @@ def _fold_scores(
     table: Table,
     truths: Mapping[str, FluxTruth],
     folds: Mapping[FoldKind, Sequence[Fold]],
-    candidates: Mapping[str, Candidate],
+    closures: Mapping[str, Closure],
     settings: ClosureSettings,
     progress: Progress,
 ) -> dict[str, dict[str, Record]]:
     """Refit each family's closure without every random and blocked fold, and score it."""
-    places = [(family, kind) for family in candidates for kind in REFITTED]
+    places = [(family, kind) for family in closures for kind in REFITTED]
     tasks = [
-        Task(family, (candidates[family],), fold) for family, kind in places for fold in folds[kind]
+        Task(
+            family,
+            (Candidate(closures[family].regressor, closures[family].target),),
+            fold,
+            closures[family].features,
+        )
+        for family, kind in places
+        for fold in folds[kind]
     ]
     answers = iter(
         carry_out(table, tasks, settings, progress=progress, note=f"{len(tasks)} folds refitted")
     )
-    scores: dict[str, dict[str, Record]] = {family: {} for family in candidates}
+    scores: dict[str, dict[str, Record]] = {family: {} for family in closures}
     for family, kind in places:
         parts = [next(answers)[0] for _ in folds[kind]]
         tensor = gather(table, folds[kind], parts).tensor
@@ -187,7 +116,7 @@ def _family_record(
 ) -> Record:
     known = selection["out_of_fold"]
     regions = {
-        region: _region_record("train", scores) for region, scores in known["regions"].items()
+        region: region_record("train", scores) for region, scores in known["regions"].items()
     }
     if held_out is not None:
         with one_thread():
@@ -200,7 +129,7 @@ def _family_record(
                 half_width=prediction.half_width,
                 trust=prediction.trust,
             )
-            regions[region] = _region_record("test", scores)
+            regions[region] = region_record("test", scores)
     return {
         "chosen": selection["chosen"],
         "rule": selection["rule"],
@@ -309,18 +238,22 @@ def evaluate(
         )
         for kind in (*REFITTED, "region")
     }
-    candidates = {
-        family: Candidate(closure.regressor, closure.target) for family, closure in closures.items()
-    }
     fold_scores = _fold_scores(
         table,
         truths,
         folds,
-        candidates,
+        closures,
         closure_settings,
         lambda share, note: progress(FITTING_SHARE * share, note),
     )
-    baselines = {name: baseline_record(name, table, held_out, folds, truths) for name in BASELINES}
+    baselines = {
+        name: (
+            bound_record(name, table, held_out, truths, by_name)
+            if name in BOUNDS
+            else baseline_record(name, table, held_out, folds, truths)
+        )
+        for name in validation_settings.baselines
+    }
     progress(FITTING_SHARE, "audit")
     regions = _audit_regions([table] if held_out is None else [table, held_out], truths)
     record: Record = plain(

@@ -19,7 +19,7 @@ from threadpoolctl import threadpool_limits
 
 from learnclosure.closures.closure import Closure
 from learnclosure.closures.table import Table
-from learnclosure.study import ClosureSettings
+from learnclosure.study import ClosureSettings, FeatureSettings
 from learnclosure.validation.folds import Fold
 
 FloatArray = npt.NDArray[np.float64]
@@ -85,11 +85,13 @@ class Task:
     candidates : tuple of Candidate
         A mean of regressors takes its parts from those before it.
     fold : Fold
+    features : FeatureSettings
     """
 
     family: str
     candidates: tuple[Candidate, ...]
     fold: Fold
+    features: FeatureSettings
 
 
 Answer = list[tuple[FloatArray, FloatArray, FloatArray]]
@@ -102,7 +104,9 @@ def _carry_out(table: Table, task: Task, settings: ClosureSettings) -> Answer:
     answer: Answer = []
     with one_thread():
         for candidate in task.candidates:
-            closure = Closure(task.family, candidate.regressor, candidate.target, settings)
+            closure = Closure(
+                task.family, candidate.regressor, candidate.target, settings, task.features
+            )
             fitted.append(closure.fit(train, reuse=fitted))
             prediction = closure.predict(inputs)
             answer.append((prediction.tensor, closure.predict_frame(inputs), prediction.trust))

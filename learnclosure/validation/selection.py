@@ -18,7 +18,7 @@ from learnclosure.closures.intervals import HalfWidths, calibrate_half_widths
 from learnclosure.closures.pointwise import half_widths_on_axes
 from learnclosure.closures.table import Table
 from learnclosure.errors import TrainingError
-from learnclosure.study import ClosureSettings, ValidationSettings
+from learnclosure.study import ClosureSettings, FeatureSettings, ValidationSettings
 from learnclosure.validation.folds import Fold, region_folds
 from learnclosure.validation.out_of_fold import (
     Candidate,
@@ -160,6 +160,7 @@ def compare(
     family: str,
     settings: ClosureSettings,
     progress: Progress,
+    features: FeatureSettings | None = None,
 ) -> tuple[list[CandidateScore], dict[Candidate, OutOfFold]]:
     """Predict every fold by every candidate trained without it, and score the result.
 
@@ -172,6 +173,7 @@ def compare(
     settings : ClosureSettings
         Regressors and targets to try.
     progress : callable
+    features : FeatureSettings, optional
 
     Returns
     -------
@@ -184,7 +186,8 @@ def compare(
         tuple(Candidate(regressor, target) for regressor in regressors)
         for target in settings.targets
     ]
-    tasks = [Task(family, lot, fold) for lot in lots for fold in folds]
+    seen = FeatureSettings() if features is None else features
+    tasks = [Task(family, lot, fold, seen) for lot in lots for fold in folds]
     note = f"{len(lots) * len(regressors)} candidates, {len(folds)} folds"
     answers = carry_out(table, tasks, settings, progress=progress, note=note)
     predictions: dict[Candidate, OutOfFold] = {}
@@ -242,6 +245,7 @@ def select_closure(
     settings: ClosureSettings,
     validation: ValidationSettings,
     progress: Progress = silent,
+    features: FeatureSettings | None = None,
 ) -> tuple[Closure, Selection]:
     """Choose, fit and calibrate the closure of one family.
 
@@ -261,6 +265,8 @@ def select_closure(
         Its number of folds is the number of strips where there is one region.
     progress : callable, optional
         Called with ``(share done, note)``.
+    features : FeatureSettings, optional
+        Groups of features and the local frame.
 
     Returns
     -------
@@ -282,12 +288,13 @@ def select_closure(
         family,
         settings,
         lambda share, note: progress(FITTED_SHARE * share, note),
+        features,
     )
     chosen = choose(scores).candidate
     guess = predictions[chosen]
     progress(FITTED_SHARE, f"fitting {chosen.regressor}, {chosen.target}")
     with one_thread():
-        closure = Closure(family, chosen.regressor, chosen.target, settings).fit(table)
+        closure = Closure(family, chosen.regressor, chosen.target, settings, features).fit(table)
     axes = closure.prepare(np, table.inputs).axes
     half_widths = calibrate_half_widths(
         guess.frame,
