@@ -11,7 +11,13 @@ import numpy.typing as npt
 import xarray as xr
 
 from learnclosure.atomic import atomic_path
-from learnclosure.quantities import LAYER_FIELD, MEAN_STATE, STATISTICS, Quantity
+from learnclosure.quantities import (
+    DEPTH_STATISTICS,
+    LAYER_FIELD,
+    MEAN_STATE,
+    STATISTICS,
+    Quantity,
+)
 
 FloatArray = npt.NDArray[np.float64]
 
@@ -20,7 +26,7 @@ _FLUX = "time mean of the ensemble covariance of velocity and"
 
 def named_quantity(name: str) -> Quantity:
     """Return the row of a mean-state or statistic quantity."""
-    return MEAN_STATE[name] if name in MEAN_STATE else STATISTICS[name]
+    return {**MEAN_STATE, **STATISTICS, **DEPTH_STATISTICS}[name]
 
 
 class StatisticsBuilder:

@@ -16,6 +16,7 @@ from learnclosure.diagnosis.ceiling_artefact import add_ceilings
 from learnclosure.diagnosis.ceilings import estimate_ceilings
 from learnclosure.diagnosis.coarse import Coarsening
 from learnclosure.diagnosis.degeneracy import check_information
+from learnclosure.diagnosis.depth_axes import add_depth_axes
 from learnclosure.diagnosis.estimate import Estimator, Form, GroupEstimate, WithheldSkill
 from learnclosure.diagnosis.gauge import HelmholtzSolver, rotational_share
 from learnclosure.diagnosis.inversion import SmoothInversion
@@ -33,6 +34,7 @@ from learnclosure.diagnosis.tensor import (
     scalar_diffusivity,
     symmetric_parts,
 )
+from learnclosure.ensemble.averaging import averaged
 from learnclosure.errors import DiagnosisError
 from learnclosure.study import DiagnosisSettings
 
@@ -68,6 +70,7 @@ def diagnose(
     """
     chosen = settings or DiagnosisSettings()
     _check_tracers(ensemble)
+    ensemble = averaged(ensemble, chosen)
     report = progress or (lambda _share, _note: None)
     coarsening = Coarsening(ensemble.grid, chosen.coarsen)
     geometry = coarsening.geometry
@@ -113,6 +116,7 @@ def diagnose(
     report(0.97, "active side")
     known = np.where(valid[..., None, None], whole.smooth.tensor, np.nan)
     active = add_active(builder, ensemble, moments, estimator, known)
+    add_depth_axes(builder, ensemble, coarsening, moments.whole, whole.gradient, chosen)
     report(1.0, "done")
     attributes = _attributes(ensemble, chosen, estimator.inversion, skill)
     statistics = builder.build({**attributes, **active})
@@ -185,6 +189,9 @@ def _add_mean_state(
     }
     for name, values in fields.items():
         builder.add_named(name, np.ascontiguousarray(values))
+    share = getattr(ensemble, "valid_share", None)
+    if share is not None:
+        builder.add_named("valid_share", coarsening.mean(share))
     if moments.halves:
         builder.add_named(
             "eddy_kinetic_energy",
@@ -280,6 +287,7 @@ def _attributes(
     geometry = inversion.geometry
     axes = [axis for axis in "xy" if getattr(geometry, f"periodic_{axis}")]
     cell = "layer" if ensemble.grid.vertical == "layers" else "level"
+    average = "thickness-weighted" if getattr(ensemble, "weighted", False) else "Reynolds"
     attributes: dict[str, Any] = {
         "Conventions": "CF-1.11",
         "title": f"eddy statistics and transport tensor of the region {ensemble.name}",
@@ -288,7 +296,7 @@ def _attributes(
         "region": ensemble.name,
         "split": ensemble.split,
         "eddy_definition": (
-            f"departure from the ensemble mean of the same time; Reynolds average in each {cell}"
+            f"departure from the ensemble mean of the same time; {average} average in each {cell}"
         ),
         "members": np.int32(len(ensemble.member_labels)),
         "snapshots": np.int32(len(ensemble.times)),
@@ -312,6 +320,7 @@ def _attributes(
         "floor_method": settings.floor_method,
         "scalar_pull": inversion.pull,
         "assumptions": "; ".join(ensemble.assumptions),
+        **getattr(ensemble, "attributes", {}),
     }
     if skill is not None:
         attributes["withheld_method"] = (

@@ -79,6 +79,8 @@ def find_conversions(roles: Roles, first: Member, assumptions: list[str]) -> Con
         "x_velocity": to(roles.x_velocity, "m s-1"),
         "y_velocity": to(roles.y_velocity, "m s-1"),
     }
+    if roles.z_velocity is not None:
+        velocities["z_velocity"] = to(roles.z_velocity, "m s-1")
     tracers = {
         name: tracer_conversion(before[name], first.where(name))
         for name in (*roles.tracers, *roles.withheld_tracers)
@@ -96,7 +98,7 @@ def find_conversions(roles: Roles, first: Member, assumptions: list[str]) -> Con
             stratifying[part] = to(name, "K" if part == "temperature" else "m s-2")
     units = {roles.stratifying[part]: change.units for part, change in stratifying.items()}
     units |= {name: change.units for name, change in tracers.items()}
-    units |= {roles.x_velocity: "m s-1", roles.y_velocity: "m s-1"}
+    units |= {getattr(roles, part): change.units for part, change in velocities.items()}
     active = {
         part: to(name, "m")
         if part == "thickness"

@@ -28,6 +28,7 @@ from learnclosure.ensemble.conversions import find_conversions, read_times
 from learnclosure.ensemble.grid import Grid
 from learnclosure.ensemble.layout import LayoutReader
 from learnclosure.ensemble.roles import find_roles
+from learnclosure.ensemble.seawater import EquationOfState
 from learnclosure.ensemble.sources import (
     Member,
     content_digest,
@@ -37,6 +38,7 @@ from learnclosure.ensemble.sources import (
 )
 from learnclosure.ensemble.stratification import buoyancy_rule
 from learnclosure.ensemble.total_flux import TotalFlux, find_total_fluxes
+from learnclosure.ensemble.upward import needed_faces, upward_at_centres, upward_notes
 from learnclosure.ensemble.vertical import is_top_last
 from learnclosure.errors import SourceError
 from learnclosure.study import EnsembleTable
@@ -118,6 +120,8 @@ class Ensemble:
         self._buoyancy_rule = buoyancy_rule(table, self.roles, self.grid, known, notes)
         self.has_buoyancy = self.roles.buoyancy is not None or self._buoyancy_rule is not None
         self._find_active(table, first, notes)
+        if self.roles.z_velocity is not None:
+            notes += upward_notes(self._table.grid.faces.get("z_velocity"))
         self.assumptions = tuple(dict.fromkeys(notes))
 
     def _find_active(self, table: EnsembleTable, first: Member, notes: list[str]) -> None:
@@ -208,6 +212,8 @@ class Ensemble:
         raw = {name: self._scalar(member, name, time) for name in self.roles.scalars}
         for name in (*self.tracers, *self.withheld_tracers):
             result[name] = np.where(mask, self._conversions.tracers[name](raw[name]), 0.0)
+        if self.roles.z_velocity is not None:
+            result["z_velocity"] = self._upward_velocity(member, self.roles.z_velocity, time)
         for flux in self._total_fluxes:
             # The flux carries the tracer without the offset that took it to SI units.
             carried = result[flux.tracer] - self._conversions.tracers[flux.tracer].offset
@@ -258,6 +264,63 @@ class Ensemble:
             self._refuse_stray(self._walls[part] & finite, member, name, time)
         centred = to_centres(values, face, self._cells)
         return np.where(self.grid.geometry.mask, self._conversions.velocities[part](centred), 0.0)
+
+    def _upward_velocity(self, member: Member, name: str, time: int) -> FloatArray:
+        """Read the upward velocity at cell centres, zero on land."""
+        mask, face = self.grid.geometry.mask, self._table.grid.faces.get("z_velocity")
+        values = self._read(member, name, time)
+        self._require(
+            needed_faces(mask, face, len(values)), np.isfinite(values), member, name, time
+        )
+        centred = upward_at_centres(values, face, mask)
+        return np.where(mask, self._conversions.velocities["z_velocity"](centred), 0.0)
+
+    @property
+    def equation(self) -> EquationOfState | None:
+        """How buoyancy follows from temperature and salinity, if it does."""
+        return self._buoyancy_rule
+
+    def stratifying(self, time: int) -> dict[str, FloatArray]:
+        """Read what the stratification comes from and nothing else.
+
+        Parameters
+        ----------
+        time : int
+            Number of the time.
+
+        Returns
+        -------
+        dict of str to ndarray, shape (member, layer, y, x)
+            ``temperature`` in K and ``salinity`` in g kg-1, or ``buoyancy`` in m s-2; zero
+            on land.
+        """
+        mask = self.grid.geometry.mask
+        return {
+            part: np.where(mask, self._conversions.stratifying[part](self.scalar(name, time)), 0.0)
+            for part, name in self.roles.stratifying.items()
+        }
+
+    def scalar(self, name: str, time: int) -> FloatArray:
+        """Read one field at cell centres of all members, in the units of the files.
+
+        Parameters
+        ----------
+        name : str
+            Name in the files.
+        time : int
+            Number of the time.
+
+        Returns
+        -------
+        ndarray, shape (member, layer, y, x)
+            What stands on land has no meaning.
+
+        Raises
+        ------
+        SourceError
+            If a value in the sea is missing or a file cannot be read.
+        """
+        return np.stack([self._scalar(member, name, time) for member in self.members])
 
     def _total(self, member: Member, flux: TotalFlux, time: int) -> FloatArray:
         """Read a total flux at cell centres, zero on land."""
