@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from io import StringIO
+
 from rich.console import Console
 
 from learnclosure.listing import feature_listing
@@ -9,7 +11,7 @@ from learnclosure.quantities import FEATURES, INPUTS
 
 
 def test_every_input_and_feature_is_listed_with_group_units_and_meaning():
-    console = Console(width=200, record=True, quiet=True)
+    console = Console(width=200, record=True, file=StringIO())
     console.print(feature_listing())
     text = console.export_text()
     for row in (*INPUTS.values(), *FEATURES.values()):
