@@ -24,6 +24,7 @@ from learnclosure.diagnosis.moments import EnsembleSource, Moments, accumulate_m
 from learnclosure.diagnosis.quality import (
     add_budget,
     add_quality,
+    add_relaxation,
     add_skill,
     cautions,
     tensor_components,
@@ -103,6 +104,8 @@ def diagnose(
     add_quality(builder, ensemble, estimator, whole, halves, valid)
     add_budget(builder, ensemble, estimator, whole, halves, valid, error)
     add_skill(builder, skill, other_form, other_skill)
+    if chosen.relaxation_time is not None:
+        add_relaxation(builder, whole, moments.whole, chosen.relaxation_time, valid)
     if halves and left_out is not None and chosen.ceiling_draws:
         report(0.9, "ceilings")
         names = (*ensemble.tracers, *ensemble.withheld_tracers)

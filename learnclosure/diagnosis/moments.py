@@ -67,7 +67,7 @@ class GroupMoments:
 
 
 def covariance_pairs(active: tuple[str, ...]) -> tuple[tuple[str, str], ...]:
-    """Pairs of fields whose covariance the energetics of the active side need.
+    """Pairs of fields whose covariance energetics and corrections need.
 
     Parameters
     ----------
@@ -77,10 +77,8 @@ def covariance_pairs(active: tuple[str, ...]) -> tuple[tuple[str, str], ...]:
     Returns
     -------
     tuple of pair of str
-        Momentum fluxes and the variance of each active field; none without active fields.
+        Momentum fluxes and the variance of each active field.
     """
-    if not active:
-        return ()
     momentum = (
         ("x_velocity", "x_velocity"), ("x_velocity", "y_velocity"), ("y_velocity", "y_velocity"),
     )  # fmt: skip
