@@ -142,6 +142,23 @@ class StatisticsBuilder:
         return xr.Dataset(self.variables, self.coordinates, dict(attributes))
 
 
+def read_cautions(path: Path) -> list[str]:
+    """Read what a diagnosis says of its own weaknesses.
+
+    Parameters
+    ----------
+    path : Path
+        A ``statistics.nc``.
+
+    Returns
+    -------
+    list of str
+        One sentence each.
+    """
+    with xr.open_dataset(path, engine="h5netcdf") as statistics:
+        return [said for said in str(statistics.attrs.get("cautions", "")).split("; ") if said]
+
+
 def write_statistics(statistics: xr.Dataset, path: Path) -> None:
     """Write ``statistics.nc`` atomically, the same bytes for the same contents.
 

@@ -105,6 +105,7 @@ def render_report(
         "diagnosis_rows": tables.diagnosis_rows(statistics),
         "ceiling_picture": ceiling_curves(shown, data),
         "active_rows": active_rows(statistics),
+        "diagnosis_cautions": tables.diagnosis_cautions(statistics),
         "audit_rows": tables.audit_rows(evaluation),
         "half_width_note": _half_width_note(evaluation),
         "coverage_rows": tables.coverage_rows(evaluation),
