@@ -159,8 +159,10 @@ class EnsembleTable(Section):
 class DiagnosisSettings(Section):
     """How eddy statistics and the transport tensor are computed."""
 
-    eddies: Literal["ensemble"] = Field(
-        "ensemble", description="eddies are departures from the ensemble mean"
+    eddies: Literal["ensemble", "ensemble-subgrid", "time"] = Field(
+        "ensemble",
+        description="eddies are departures from the ensemble mean, the same and what coarse "
+        "cells hide, or departures from each member's time mean",
     )
     coarsen: int = Field(2, ge=1, le=64, description="cells per coarse cell along x and y")
     smoothing_length: float = Field(

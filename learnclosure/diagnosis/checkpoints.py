@@ -7,6 +7,7 @@ import time
 import zipfile
 from dataclasses import dataclass, field
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 
@@ -71,10 +72,13 @@ class Checkpoint:
         if time.monotonic() - self._written < self.every:
             return
         record = {"mark": self.mark, "chunks": chunks, "fields": state.fields}
+        arrays: dict[str, Any] = {RECORD: np.array(json.dumps(record)), **state.sums}
         with atomic_path(self.path) as temporary, temporary.open("wb") as stream:
-            np.savez(stream, **{RECORD: np.array(json.dumps(record))}, **state.sums)
+            np.savez(stream, **arrays)
         self._written = time.monotonic()
 
     def clear(self) -> None:
-        """Remove the file; the run is done."""
+        """Remove the file, and what a killed process was writing; the run is done."""
         self.path.unlink(missing_ok=True)
+        for partial in self.path.parent.glob(f".{self.path.name}.*.partial"):
+            partial.unlink(missing_ok=True)

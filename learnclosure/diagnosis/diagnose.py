@@ -15,7 +15,9 @@ from learnclosure.diagnosis.ceiling_artefact import add_ceilings
 from learnclosure.diagnosis.ceilings import estimate_ceilings
 from learnclosure.diagnosis.coarse import Coarsening
 from learnclosure.diagnosis.degeneracy import check_information
+from learnclosure.diagnosis.eddies import describe
 from learnclosure.diagnosis.estimate import Estimator, Form, GroupEstimate, WithheldSkill
+from learnclosure.diagnosis.execution import Execution
 from learnclosure.diagnosis.gauge import HelmholtzSolver, rotational_share
 from learnclosure.diagnosis.inversion import SmoothInversion
 from learnclosure.diagnosis.moments import EnsembleSource, Moments, accumulate_moments
@@ -43,6 +45,7 @@ def diagnose(
     settings: DiagnosisSettings | None = None,
     *,
     progress: Callable[[float, str], None] | None = None,
+    execution: Execution | None = None,
 ) -> xr.Dataset:
     """Diagnose eddy statistics and the transport tensor of one region.
 
@@ -53,6 +56,8 @@ def diagnose(
     settings : DiagnosisSettings, optional
     progress : callable, optional
         Called with the share done and a note.
+    execution : Execution, optional
+        Who sums the moments and where they are kept meanwhile.
 
     Returns
     -------
@@ -72,7 +77,11 @@ def diagnose(
     geometry = coarsening.geometry
     area = geometry.area * coarsening.wet_share
     moments = accumulate_moments(
-        ensemble, coarsening, progress=lambda share: report(0.7 * share, "moments")
+        ensemble,
+        coarsening,
+        chosen.eddies,
+        progress=lambda share: report(0.7 * share, "moments"),
+        execution=execution,
     )
     check_information(moments, ensemble, geometry.mask)
     estimator = Estimator.from_settings(
@@ -282,8 +291,8 @@ def _attributes(
         "references": "Plumb and Mahlman 1987, J. Atmos. Sci. 44, 298-327",
         "region": ensemble.name,
         "split": ensemble.split,
-        "eddy_definition": (
-            f"departure from the ensemble mean of the same time; Reynolds average in each {cell}"
+        "eddy_definition": describe(
+            settings.eddies, bool(getattr(ensemble, "weighted", False)), cell
         ),
         "members": np.int32(len(ensemble.member_labels)),
         "snapshots": np.int32(len(ensemble.times)),

@@ -9,7 +9,13 @@ import numpy as np
 
 from learnclosure.diagnosis.coarse import Coarsening
 from learnclosure.diagnosis.kernels import add_moments
-from learnclosure.diagnosis.moment_layout import Layout, group_sizes, has_halves, layouts_of, rows_of
+from learnclosure.diagnosis.moment_layout import (
+    Layout,
+    group_sizes,
+    has_halves,
+    layouts_of,
+    rows_of,
+)
 from learnclosure.diagnosis.moment_sums import Finisher, MomentState
 from learnclosure.diagnosis.moment_types import (
     Definition,
@@ -232,7 +238,7 @@ class Accumulation:
     def _targets(
         self, state: MomentState, name: str, layout: Layout, block: int, *, split: bool = True
     ) -> tuple[FloatArray, ...]:
-        """Sums that a kernel call adds to; those nobody asks for are not kept."""
+        """Return the sums a kernel call adds to; those nobody asks for are not kept."""
         space = self.coarsening.sea_area.shape
         channels = (2 + len(layout.fields) + len(layout.pairs), *space)
         groups = len(group_sizes(self.members)) if split else 1

@@ -106,7 +106,7 @@ def merged_chunks(
         state = state.merge(result)
         done += 1
         report(0.0)
-        if checkpoint is not None and done < len(chunks):
+        if checkpoint is not None:
             checkpoint.save(done, state)
     return state
 

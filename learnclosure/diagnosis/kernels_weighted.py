@@ -72,8 +72,8 @@ def _group_sums(plan, values, weight, mean, product, apart, total):  # type: ign
 
 
 @compiled
-def _fold_means(plan, mean, apart, total, members, values):  # type: ignore[no-untyped-def]
-    """Sums over part of the members, whose departures are summed in ``apart``."""
+def _sum_part(mean, apart, total, members, values):  # type: ignore[no-untyped-def]
+    """Average part of the members, whose departures are summed in ``apart``."""
     for field in range(len(values)):
         for point in range(len(total)):
             summed = total[point] * mean[field, point] + apart[field, point]
@@ -95,7 +95,7 @@ def _estimate(tile, plan, area, mean, product, apart, total, present, members, f
             values[0, point] = total[point] / members
     scale(values, area, values[:first])
     fold(values, tile, plan.factor, target[:first])
-    _fold_means(plan, mean, apart, total, members, values[:fields])
+    _sum_part(mean, apart, total, members, values[:fields])
     scale(values, area, values[:fields])
     fold(values, tile, plan.factor, target[first : first + fields])
     for pair in range(pairs):
@@ -117,7 +117,7 @@ def _group_estimate(tile, plan, area, mean, product, apart, total, size, target)
     values = np.empty((1 + plan.kept_fields + plan.kept_pairs, points))
     for point in range(points):
         values[0, point] = total[point] / size
-    _fold_means(plan, mean, apart, total, size, values[1 : 1 + plan.kept_fields])
+    _sum_part(mean, apart, total, size, values[1 : 1 + plan.kept_fields])
     for pair in range(plan.kept_pairs):
         for point in range(points):
             values[1 + plan.kept_fields + pair, point] = product[pair, point] / size

@@ -48,7 +48,7 @@ def block_fields(fields: Fields, layout: Layout, coarsening: Coarsening) -> dict
         return np.asarray(summed / np.where(total > 0.0, total, 1.0))
 
     wide = {name: np.asarray(values, dtype=np.float64) for name, values in fields.items()}
-    result: Fields = {name: block_mean(wide[name]) for name in layout.fields}
+    result = {name: block_mean(wide[name]) for name in layout.fields}
     departure = {
         name: wide[name] - coarsening.spread(result[name])
         for name in (*layout.velocities, *layout.scalars)
@@ -58,12 +58,12 @@ def block_fields(fields: Fields, layout: Layout, coarsening: Coarsening) -> dict
         own = block_mean(departure[first] * departure[second])
         result[name] = result[name] + own if name in result else own
     if total is None:
-        return {"moments": result}
+        return {"moments": {**result}}
     result[THICKNESS] = total
-    plain: Fields = {THICKNESS: total}
+    plain = {THICKNESS: total}
     for axis in HORIZONTAL:
         plain[axis] = coarsening.mean(wide[axis])
         name = f"{THICKNESS}_within_{axis[0]}"
         plain[name] = total * (result[axis] - plain[axis])
         result[name] = plain[name]
-    return {"moments": result, "bolus": plain}
+    return {"moments": {**result}, "bolus": {**plain}}

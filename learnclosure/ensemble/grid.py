@@ -79,12 +79,12 @@ class Grid:
         layers, rows, columns = self.geometry.mask.shape
         return layers, rows, columns
 
-    def of_rows(self, rows: slice) -> Grid:
+    def of_rows(self, rows: slice | npt.NDArray[np.int64]) -> Grid:
         """Return the grid of some rows; it has walls to the north and south.
 
         Parameters
         ----------
-        rows : slice
+        rows : slice or ndarray of int
 
         Returns
         -------
@@ -99,7 +99,7 @@ class Grid:
                 dy=geometry.dy[rows],
                 mask=geometry.mask[:, rows],
                 periodic_x=geometry.periodic_x,
-                periodic_y=geometry.periodic_y and len(self.y[rows]) == len(self.y),
+                periodic_y=False,
             ),
             layer_thickness=self.layer_thickness[:, rows],
             reduced_gravity=None if gravity is None else gravity[:, rows],
