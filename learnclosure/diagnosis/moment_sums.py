@@ -189,7 +189,7 @@ class Finisher:
         )
 
     def _within(self, layout: Layout, groups: FloatArray) -> FloatArray:
-        """Return the sums of the parts of covariances that fields hold already, for kept products."""
+        """Return what fields hold already of each kept covariance."""
         found = np.zeros((len(groups), layout.kept_pairs, *self.area.shape))
         for number, pair in enumerate(layout.pairs[: layout.kept_pairs]):
             name = layout.within_name(pair)

@@ -448,7 +448,7 @@ class Ensemble:
         variable = first.dataset[self.tracers[0]]
         count = variable.sizes[self.axes.time] if self.axes.time is not None else 1
         one = variable.nbytes / max(count, 1) * len(self.roles.fields)
-        one *= self.grid.shape[1] / variable.sizes[self.axes.y]
+        one *= self._cells.rows / variable.sizes[self.axes.y]
         if first.dimension is None:
             one *= len(self.members)
         return int(max(1, min(count, BLOCK_BYTES // max(one, 1))))
