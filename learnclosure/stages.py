@@ -89,7 +89,7 @@ class Artefacts:
         return self.root / "report.html"
 
     def checkpoint(self, region: str) -> Path:
-        """Sums of a region so far, while its diagnosis runs."""
+        """Moments of a region summed so far, while its diagnosis runs."""
         return self.root / "stages" / f"diagnose-{region}.npz"
 
     def _record(self, stage: str) -> Path:
