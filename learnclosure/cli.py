@@ -14,12 +14,15 @@ from rich.console import Console
 from rich.progress import (
     BarColumn,
     Progress,
+    ProgressColumn,
+    Task,
     TaskID,
     TaskProgressColumn,
     TextColumn,
     TimeElapsedColumn,
     TimeRemainingColumn,
 )
+from rich.text import Text
 
 from learnclosure import __version__
 from learnclosure.errors import CheckFailedError, InputError, LearnclosureError
@@ -33,10 +36,24 @@ WORKERS = click.option(
     type=click.IntRange(1, 64),
     default=2,
     show_default=True,
-    help="Regions worked on at once, each in a process of its own.",
+    help="Processes: regions side by side; several share the moments of a single one.",
+)
+CLUSTER = click.option(
+    "--cluster",
+    metavar="ADDRESS",
+    help="Address of a dask scheduler whose workers sum the moments, as tcp://host:8786.",
 )
 console = Console(highlight=False)
 messages = Console(stderr=True, highlight=False)
+
+
+class RateColumn(ProgressColumn):
+    """How fast a task goes on."""
+
+    def render(self, task: Task) -> Text:
+        """Show the share of the task done in a minute."""
+        speed = task.finished_speed or task.speed
+        return Text("" if speed is None else f"{60.0 * speed:.0%}/min")
 
 
 @contextmanager
@@ -56,6 +73,7 @@ def progress_bars() -> Iterator[ProgressCall]:
         TextColumn("{task.description}"),
         BarColumn(bar_width=24),
         TaskProgressColumn(),
+        RateColumn(),
         TimeElapsedColumn(),
         TimeRemainingColumn(),
         TextColumn("{task.fields[note]}"),
@@ -194,7 +212,8 @@ def inspect(study_file: Path | None, features: bool, target_error: float, as_jso
 @commands.command(epilog=_example("learnclosure diagnose study.toml --workers 2"))
 @STUDY
 @WORKERS
-def diagnose(study_file: Path, workers: int) -> None:
+@CLUSTER
+def diagnose(study_file: Path, workers: int, cluster: str | None) -> None:
     """Compute eddy statistics and the transport tensor of every region."""
     from learnclosure.diagnosis.artefact import read_cautions
     from learnclosure.study import read_study
@@ -202,7 +221,7 @@ def diagnose(study_file: Path, workers: int) -> None:
 
     study = read_study(study_file)
     with progress_bars() as progress:
-        diagnose_study(study, progress=progress, workers=workers)
+        diagnose_study(study, progress=progress, workers=workers, cluster=cluster)
     for table in study.ensembles:
         path = artefacts(study).statistics(table.name)
         console.print(str(path), markup=False, soft_wrap=True)
@@ -286,14 +305,15 @@ def report(study_file: Path) -> None:
 @commands.command(epilog=_example("learnclosure run study.toml"))
 @STUDY
 @WORKERS
-def run(study_file: Path, workers: int) -> None:
+@CLUSTER
+def run(study_file: Path, workers: int, cluster: str | None) -> None:
     """Run every stage; stages whose inputs are unchanged are kept."""
     from learnclosure.study import read_study
     from learnclosure.workflow import artefacts, read_json, run_study
 
     study = read_study(study_file)
     with progress_bars() as progress:
-        run_study(study, progress=progress, workers=workers)
+        run_study(study, progress=progress, workers=workers, cluster=cluster)
     places = artefacts(study)
     for family in study.closure.families:
         console.print(str(places.bundle(family)), markup=False, soft_wrap=True)

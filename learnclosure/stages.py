@@ -88,6 +88,10 @@ class Artefacts:
         """The report page."""
         return self.root / "report.html"
 
+    def checkpoint(self, region: str) -> Path:
+        """Moments of a region summed so far, while its diagnosis runs."""
+        return self.root / "stages" / f"diagnose-{region}.npz"
+
     def _record(self, stage: str) -> Path:
         return self.root / "stages" / f"{stage}.json"
 

@@ -219,8 +219,10 @@ class LayerSettings(Section):
 class DiagnosisSettings(Section):
     """How eddy statistics and the transport tensor are computed."""
 
-    eddies: Literal["ensemble"] = Field(
-        "ensemble", description="eddies are departures from the ensemble mean"
+    eddies: Literal["ensemble", "ensemble-subgrid", "time"] = Field(
+        "ensemble",
+        description="eddies are departures from the ensemble mean, the same and what coarse "
+        "cells hide, or departures from each member's time mean",
     )
     averaging: Literal["thickness-weighted", "reynolds"] | None = Field(
         None, description="averages; thickness-weighted by default on layers remapped to"

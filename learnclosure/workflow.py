@@ -9,13 +9,13 @@ from __future__ import annotations
 import json
 import os
 from collections.abc import Callable, Mapping
-from concurrent.futures import ProcessPoolExecutor, as_completed
-from multiprocessing import get_context
+from functools import partial
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from learnclosure.atomic import atomic_path, prepare_folder
 from learnclosure.errors import InputError, TrainingError
+from learnclosure.simulate.processes import run_in_processes
 from learnclosure.stages import Artefacts, file_digest, fingerprint
 from learnclosure.study import EnsembleTable, Study
 
@@ -50,21 +50,49 @@ def _sources_mark(study: Study, table: EnsembleTable) -> list[list[str | int]]:
     return marks
 
 
-def _diagnose_region(study: Study, table: EnsembleTable) -> None:
+def _diagnose_region(
+    study: Study,
+    table: EnsembleTable,
+    mark: str,
+    *,
+    workers: int = 1,
+    cluster: str | None = None,
+    progress: Progress = silent,
+) -> None:
+    """Diagnose one region, going on from what a stopped run has left."""
     from learnclosure.diagnosis.artefact import write_statistics
+    from learnclosure.diagnosis.checkpoints import Checkpoint
     from learnclosure.diagnosis.diagnose import diagnose
+    from learnclosure.diagnosis.execution import Execution
     from learnclosure.ensemble.reader import open_ensemble
     from learnclosure.features.artefact import write_features
 
-    places = artefacts(study)
+    places, task = artefacts(study), f"diagnose {table.name}"
+    checkpoint = Checkpoint(places.checkpoint(table.name), mark)
     with open_ensemble(table, study.folder) as ensemble:
-        statistics = diagnose(ensemble, study.diagnosis)
+        statistics = diagnose(
+            ensemble,
+            study.diagnosis,
+            progress=lambda share, note: progress(task, 0.99 * share, note),
+            execution=Execution(workers, cluster, checkpoint),
+        )
     write_statistics(statistics, places.statistics(table.name))
     write_features(statistics, places.features(table.name))
+    places.note(f"diagnose-{table.name}", mark, _diagnosed(places, table))
+    checkpoint.clear()
+    progress(task, 1.0, "done")
 
 
-def diagnose_study(study: Study, *, progress: Progress = silent, workers: int = 2) -> None:
+def _diagnosed(places: Artefacts, table: EnsembleTable) -> list[Path]:
+    return [places.statistics(table.name), places.features(table.name)]
+
+
+def diagnose_study(
+    study: Study, *, progress: Progress = silent, workers: int = 2, cluster: str | None = None
+) -> None:
     """Compute eddy statistics, transport tensors and features of every region.
+
+    A run that was stopped goes on from where it was, and ends with the same bytes.
 
     Parameters
     ----------
@@ -72,7 +100,10 @@ def diagnose_study(study: Study, *, progress: Progress = silent, workers: int = 
     progress : callable, optional
         Called with ``(region, share done, note)``.
     workers : int, optional
-        Regions worked on at once, each in a process of its own.
+        Processes: regions are worked on side by side, and several share a single one. One
+        that dies is replaced.
+    cluster : str, optional
+        Address of a dask scheduler whose workers sum the moments, one region after another.
 
     Raises
     ------
@@ -81,8 +112,7 @@ def diagnose_study(study: Study, *, progress: Progress = silent, workers: int = 
     """
     places = artefacts(study)
     prepare_folder(places.root)
-    marks: dict[str, str] = {}
-    pending: list[EnsembleTable] = []
+    jobs: dict[str, Callable[..., None]] = {}
     for table in study.ensembles:
         mark = fingerprint(
             "diagnose",
@@ -92,33 +122,16 @@ def diagnose_study(study: Study, *, progress: Progress = silent, workers: int = 
                 "sources": _sources_mark(study, table),
             },
         )
-        outputs = [places.statistics(table.name), places.features(table.name)]
-        marks[table.name] = mark
-        if places.current(f"diagnose-{table.name}", mark, outputs):
+        if places.current(f"diagnose-{table.name}", mark, _diagnosed(places, table)):
             progress(f"diagnose {table.name}", 1.0, "stands already")
         else:
-            pending.append(table)
+            jobs[table.name] = partial(_diagnose_region, study, table, mark)
             progress(f"diagnose {table.name}", 0.0, "")
-
-    def done(table: EnsembleTable) -> None:
-        outputs = [places.statistics(table.name), places.features(table.name)]
-        places.note(f"diagnose-{table.name}", marks[table.name], outputs)
-        progress(f"diagnose {table.name}", 1.0, "done")
-
-    if min(workers, len(pending)) <= 1:
-        for table in pending:
-            _diagnose_region(study, table)
-            done(table)
+    if cluster is not None or len(jobs) <= 1:
+        for job in jobs.values():
+            job(progress=progress, workers=workers, cluster=cluster)
         return
-    with ProcessPoolExecutor(workers, mp_context=get_context("spawn")) as pool:
-        jobs = {pool.submit(_diagnose_region, study, table): table for table in pending}
-        try:
-            for job in as_completed(jobs):
-                job.result()
-                done(jobs[job])
-        except BaseException:
-            pool.shutdown(wait=False, cancel_futures=True)
-            raise
+    run_in_processes(jobs, workers, progress, attempts=3)
 
 
 def load_statistics(study: Study, split: str | None = None) -> dict[str, xr.Dataset]:
@@ -399,7 +412,13 @@ def failed_checks(evaluation: Mapping[str, Any]) -> list[str]:
     ]
 
 
-def run_study(study: Study, *, progress: Progress = silent, workers: int | None = None) -> None:
+def run_study(
+    study: Study,
+    *,
+    progress: Progress = silent,
+    workers: int | None = None,
+    cluster: str | None = None,
+) -> None:
     """Run every stage of a study, from ensembles to bundles and report.
 
     Parameters
@@ -407,7 +426,9 @@ def run_study(study: Study, *, progress: Progress = silent, workers: int | None 
     study : Study
     progress : callable, optional
     workers : int, optional
-        Regions diagnosed at once; by default two, or one on a single core.
+        Processes that diagnose; by default two, or one on a single core.
+    cluster : str, optional
+        Address of a dask scheduler whose workers sum the moments.
 
     Raises
     ------
@@ -416,7 +437,8 @@ def run_study(study: Study, *, progress: Progress = silent, workers: int | None 
     """
     from learnclosure.delivery import export_study, report_study
 
-    diagnose_study(study, progress=progress, workers=workers or min(2, os.cpu_count() or 1))
+    workers = workers or min(2, os.cpu_count() or 1)
+    diagnose_study(study, progress=progress, workers=workers, cluster=cluster)
     train_study(study, progress=progress)
     evaluate_study(study, progress=progress)
     export_study(study, progress=progress)

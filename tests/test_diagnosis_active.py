@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 
@@ -196,7 +198,7 @@ def test_a_passive_tensor_carries_a_flux_it_was_made_from():
             {"potential_vorticity": 1e-5 * bend}, {"potential_vorticity": flux},
             moments.whole.eddy_kinetic_energy, {},
         )  # fmt: skip
-        changed = type(moments)(group, (group, group), {}, {})
+        changed = replace(moments, whole=group, halves=(group, group))
         return carried_potential_vorticity(changed, estimator, tensor, np.zeros((2, 1)))
 
     carried, against = score(exact), score(-exact)

@@ -74,6 +74,26 @@ class Coarsening:
         total = _block_sum(np.where(self._weight > 0.0, field * self._weight, 0.0), self.factor)
         return np.asarray(total / np.where(self._total > 0.0, self._total, 1.0))
 
+    @property
+    def sea_area(self) -> FloatArray:
+        """Sea area of each coarse cell, shape (layer, y, x), m2."""
+        return self._total
+
+    def spread(self, coarse: FloatArray) -> FloatArray:
+        """Give every cell the value of its block.
+
+        Parameters
+        ----------
+        coarse : ndarray, shape (..., coarse y, coarse x)
+
+        Returns
+        -------
+        ndarray, shape (..., y, x)
+        """
+        rows, columns = self.grid.shape[1:]
+        wide = coarse.repeat(self.factor, axis=-1)[..., :columns]
+        return np.asarray(wide.repeat(self.factor, axis=-2)[..., :rows, :])
+
     def surface_mean(self, field: FloatArray) -> FloatArray:
         """Average a field that does not depend on the layer over all of each block.
 

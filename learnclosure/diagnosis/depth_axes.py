@@ -18,7 +18,7 @@ from learnclosure.diagnosis.isoneutral import (
     slopes_from_buoyancy,
     slopes_of_layers,
 )
-from learnclosure.diagnosis.moments import EnsembleSource, GroupMoments, accumulate_moments
+from learnclosure.diagnosis.moments import EnsembleSource, GroupMoments
 from learnclosure.diagnosis.tensor import LARGEST_CONDITION_NUMBER
 from learnclosure.diagnosis.tensor_3d import (
     AXES,
@@ -56,46 +56,6 @@ class DepthTensor(NamedTuple):
     condition: FloatArray
     upward_flux: dict[str, FloatArray]
     upward_gradient: dict[str, FloatArray]
-
-
-class _UpwardSource:
-    """An ensemble whose velocity along x is the upward one, so that moments hold its fluxes."""
-
-    weighted = False
-    active: tuple[str, ...] = ()
-
-    def __init__(self, source: EnsembleSource) -> None:
-        self._source = source
-        self.name, self.split, self.grid = source.name, source.split, source.grid
-        self.member_labels, self.times = source.member_labels, source.times
-        self.tracers, self.withheld_tracers = source.tracers, source.withheld_tracers
-        self.units, self.has_buoyancy = source.units, False
-        self.left_out_gradients: dict[str, FloatArray] = {}
-        self.assumptions = source.assumptions
-
-    def fields(self, time: int) -> dict[str, FloatArray]:
-        """Return tracers and the upward velocity in the place of that along x."""
-        fields = self._source.fields(time)
-        names = ("y_velocity", *self.tracers, *self.withheld_tracers)
-        return {"x_velocity": fields["z_velocity"], **{name: fields[name] for name in names}}
-
-
-def upward_fluxes(source: EnsembleSource, coarsening: Coarsening) -> dict[str, FloatArray]:
-    """Accumulate upward eddy fluxes over all times.
-
-    Parameters
-    ----------
-    source : EnsembleSource
-        Its fields hold ``z_velocity``.
-    coarsening : Coarsening
-
-    Returns
-    -------
-    dict of str to ndarray, shape (layer, y, x)
-        Unbiased covariance of upward velocity and each tracer, mean over times.
-    """
-    flux = accumulate_moments(_UpwardSource(source), coarsening).whole.flux
-    return {name: values[0] for name, values in flux.items()}
 
 
 def diagnose_depth_tensor(
@@ -138,7 +98,7 @@ def diagnose_depth_tensor(
     geometry = coarsening.geometry
     thickness = coarsening.mean(source.grid.layer_thickness)
     area = geometry.area * coarsening.wet_share
-    flux = upward_fluxes(source, coarsening)
+    flux = whole.upward_flux
     names = (*source.tracers, *source.withheld_tracers)
     steep = {name: vertical_gradient(whole.mean[name], thickness, geometry.mask) for name in names}
     equations = normal_equations_3d(

@@ -17,7 +17,9 @@ from learnclosure.diagnosis.ceilings import estimate_ceilings
 from learnclosure.diagnosis.coarse import Coarsening
 from learnclosure.diagnosis.degeneracy import check_information
 from learnclosure.diagnosis.depth_axes import add_depth_axes
+from learnclosure.diagnosis.eddies import describe
 from learnclosure.diagnosis.estimate import Estimator, Form, GroupEstimate, WithheldSkill
+from learnclosure.diagnosis.execution import Execution
 from learnclosure.diagnosis.gauge import HelmholtzSolver, rotational_share
 from learnclosure.diagnosis.inversion import SmoothInversion
 from learnclosure.diagnosis.moments import EnsembleSource, Moments, accumulate_moments
@@ -47,6 +49,7 @@ def diagnose(
     settings: DiagnosisSettings | None = None,
     *,
     progress: Callable[[float, str], None] | None = None,
+    execution: Execution | None = None,
 ) -> xr.Dataset:
     """Diagnose eddy statistics and the transport tensor of one region.
 
@@ -57,6 +60,8 @@ def diagnose(
     settings : DiagnosisSettings, optional
     progress : callable, optional
         Called with the share done and a note.
+    execution : Execution, optional
+        Who sums the moments and where they are kept meanwhile.
 
     Returns
     -------
@@ -77,7 +82,11 @@ def diagnose(
     geometry = coarsening.geometry
     area = geometry.area * coarsening.wet_share
     moments = accumulate_moments(
-        ensemble, coarsening, progress=lambda share: report(0.7 * share, "moments")
+        ensemble,
+        coarsening,
+        chosen.eddies,
+        progress=lambda share: report(0.7 * share, "moments"),
+        execution=execution,
     )
     check_information(moments, ensemble, geometry.mask)
     estimator = Estimator.from_settings(
@@ -113,7 +122,7 @@ def diagnose(
             builder,
             estimate_ceilings(
                 moments, estimator, whole, halves, left_out, valid, names,
-                draws=chosen.ceiling_draws,
+                members=len(ensemble.member_labels), draws=chosen.ceiling_draws,
             ),
         )  # fmt: skip
     report(0.97, "active side")
@@ -290,7 +299,6 @@ def _attributes(
     geometry = inversion.geometry
     axes = [axis for axis in "xy" if getattr(geometry, f"periodic_{axis}")]
     cell = "layer" if ensemble.grid.vertical == "layers" else "level"
-    average = "thickness-weighted" if getattr(ensemble, "weighted", False) else "Reynolds"
     attributes: dict[str, Any] = {
         "Conventions": "CF-1.11",
         "title": f"eddy statistics and transport tensor of the region {ensemble.name}",
@@ -298,8 +306,8 @@ def _attributes(
         "references": "Plumb and Mahlman 1987, J. Atmos. Sci. 44, 298-327",
         "region": ensemble.name,
         "split": ensemble.split,
-        "eddy_definition": (
-            f"departure from the ensemble mean of the same time; {average} average in each {cell}"
+        "eddy_definition": describe(
+            settings.eddies, bool(getattr(ensemble, "weighted", False)), cell
         ),
         "members": np.int32(len(ensemble.member_labels)),
         "snapshots": np.int32(len(ensemble.times)),

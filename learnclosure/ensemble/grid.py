@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any, Literal
 
 import numpy as np
@@ -78,6 +78,36 @@ class Grid:
         """Number of layers, rows and columns."""
         layers, rows, columns = self.geometry.mask.shape
         return layers, rows, columns
+
+    def of_rows(self, rows: slice | npt.NDArray[np.int64]) -> Grid:
+        """Return the grid of some rows; it has walls to the north and south.
+
+        Parameters
+        ----------
+        rows : slice or ndarray of int
+
+        Returns
+        -------
+        Grid
+        """
+        geometry, gravity = self.geometry, self.reduced_gravity
+        return replace(
+            self,
+            y=self.y[rows],
+            geometry=Geometry(
+                dx=geometry.dx[rows],
+                dy=geometry.dy[rows],
+                mask=geometry.mask[:, rows],
+                periodic_x=geometry.periodic_x,
+                periodic_y=False,
+            ),
+            layer_thickness=self.layer_thickness[:, rows],
+            reduced_gravity=None if gravity is None else gravity[:, rows],
+            coriolis_parameter=self.coriolis_parameter[rows],
+            planetary_beta_x=self.planetary_beta_x[rows],
+            planetary_beta_y=self.planetary_beta_y[rows],
+            sea_floor_depth=self.sea_floor_depth[rows],
+        )
 
 
 def _neighbour(field: npt.NDArray[Any], axis: int, step: int, periodic: bool) -> npt.NDArray[Any]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import copy
 from collections.abc import Iterator
 from contextlib import ExitStack
 from dataclasses import replace
@@ -36,6 +37,7 @@ from learnclosure.ensemble.sources import (
     first_line,
     open_members,
 )
+from learnclosure.ensemble.stored import Band, StoredVariables, band_of
 from learnclosure.ensemble.stratification import buoyancy_rule
 from learnclosure.ensemble.total_flux import TotalFlux, find_total_fluxes
 from learnclosure.ensemble.upward import needed_faces, upward_at_centres, upward_notes
@@ -86,6 +88,9 @@ class Ensemble:
         self._stack = ExitStack()
         self._block: dict[tuple[Path, str], npt.NDArray[Any]] = {}
         self._block_start = -1
+        self._stored = StoredVariables(self._stack)
+        self._band: Band | None = None
+        self._part: tuple[slice, Ensemble] | None = None
         try:
             self._open(table, folder)
         except BaseException:
@@ -115,9 +120,7 @@ class Ensemble:
         check_grids_alike(self.members, layout.used, self.axes.time)
         self.member_labels = tuple(member.label for member in self.members)
         notes = [*layout.assumptions, *self._find_walls(first)]
-        name = self.roles.temperature
-        known = str(first.dataset[name].attrs.get("standard_name", "")) if name else ""
-        self._buoyancy_rule = buoyancy_rule(table, self.roles, self.grid, known, notes)
+        self._find_rules(notes)
         self.has_buoyancy = self.roles.buoyancy is not None or self._buoyancy_rule is not None
         self._find_active(table, first, notes)
         if self.roles.z_velocity is not None:
@@ -139,6 +142,16 @@ class Ensemble:
         levels = self.has_buoyancy and self.grid.vertical == "levels"
         self.active = (*names, *derived, *(("buoyancy",) if levels else ()))
         self.units |= {"interface_height": "m", "buoyancy": "m s-2"}
+
+    def _find_rules(self, notes: list[str]) -> None:
+        """Find what depends on the rows of the grid besides the grid itself."""
+        first, name = self.members[0], self.roles.temperature
+        known = str(first.dataset[name].attrs.get("standard_name", "")) if name else ""
+        self._buoyancy_rule = buoyancy_rule(self._table, self.roles, self.grid, known, notes)
+
+    def __reduce__(self) -> tuple[Any, ...]:
+        """Open the files again in another process."""
+        return open_ensemble, (self._table, self._folder.resolve())
 
     def __enter__(self) -> Ensemble:
         return self
@@ -182,11 +195,68 @@ class Ensemble:
         SourceError
             If a value in the sea is missing, a layer vanishes or a file cannot be read.
         """
-        found: dict[str, list[FloatArray]] = {}
-        for member in self.members:
-            for name, values in self._member_fields(member, time).items():
-                found.setdefault(name, []).append(values)
+        mask = self.grid.geometry.mask
+        every = slice(None)
+        return {
+            name: np.where(mask, values.astype(np.float64, copy=False), 0.0)
+            for name, values in self.fields_of(time, every, every).items()
+        }
+
+    def fields_of(
+        self, time: int, members: slice, rows: slice
+    ) -> dict[str, npt.NDArray[np.floating]]:
+        """Read one time of some members and rows.
+
+        Parameters
+        ----------
+        time : int
+            Number of the time.
+        members, rows : slice
+            Which ones.
+
+        Returns
+        -------
+        dict of str to ndarray, shape (member, layer, row, x)
+            As ``fields``, in the precision of the files where numbers are as they are
+            there; anything on land.
+
+        Raises
+        ------
+        SourceError
+            If a value in the sea is missing or a file cannot be read.
+        """
+        source = self._rows_of(rows)
+        wanted = slice(None) if source._band is None else source._band.wanted
+        found: dict[str, list[npt.NDArray[np.floating]]] = {}
+        for member in self.members[members]:
+            for name, values in source._member_fields(member, time).items():
+                found.setdefault(name, []).append(values[:, wanted])
         return {name: np.stack(values) for name, values in found.items()}
+
+    def _rows_of(self, rows: slice) -> Ensemble:
+        """Return this ensemble as if the files held no more than a band of rows."""
+        count = self.grid.shape[1]
+        rows = slice(*rows.indices(count)[:2])
+        if rows == slice(0, count):
+            return self
+        if self._part is not None and self._part[0] == rows:
+            return self._part[1]
+        part = copy.copy(self)
+        band = band_of(rows, count, periodic=self._cells.periodic_y)
+        part._band, part._block, part._block_start, part._part = band, {}, -1, None
+        part.__dict__.pop("_block_times", None)
+        numbers = band.numbers()
+        part.grid = self.grid.of_rows(numbers)
+        part._cells = self._cells._replace(rows=len(numbers), periodic_y=False)
+        for walls in ("_open_faces", "_walls"):
+            cut = {
+                name: values[:, band.numbers(values.shape[1] - count)]
+                for name, values in getattr(self, walls).items()
+            }
+            setattr(part, walls, cut)
+        part._find_rules([])
+        self._part = (rows, part)
+        return part
 
     def find_problems(self, time: int) -> Iterator[SourceError]:
         """Find what keeps the fields of one time from being read, member by member.
@@ -206,18 +276,22 @@ class Ensemble:
             except SourceError as error:
                 yield error
 
-    def _member_fields(self, member: Member, time: int) -> dict[str, FloatArray]:
+    def _member_fields(self, member: Member, time: int) -> dict[str, npt.NDArray[np.floating]]:
+        """Read the fields of one member, with anything on land."""
         mask = self.grid.geometry.mask
-        result = {part: self._velocity(member, part, time) for part in ("x_velocity", "y_velocity")}
-        raw = {name: self._scalar(member, name, time) for name in self.roles.scalars}
+        result: dict[str, npt.NDArray[np.floating]] = {
+            part: self._velocity(member, part, time) for part in ("x_velocity", "y_velocity")
+        }
+        raw = {name: self._checked(member, name, time) for name in self.roles.scalars}
         for name in (*self.tracers, *self.withheld_tracers):
-            result[name] = np.where(mask, self._conversions.tracers[name](raw[name]), 0.0)
+            result[name] = self._conversions.tracers[name].where_needed(raw[name])
         if self.roles.z_velocity is not None:
             result["z_velocity"] = self._upward_velocity(member, self.roles.z_velocity, time)
         for flux in self._total_fluxes:
             # The flux carries the tracer without the offset that took it to SI units.
-            carried = result[flux.tracer] - self._conversions.tracers[flux.tracer].offset
-            mean = result[f"{flux.axis}_velocity"] * np.where(mask, carried, 0.0)
+            carried = np.float64(result[flux.tracer])
+            carried = carried - self._conversions.tracers[flux.tracer].offset
+            mean = np.where(mask, result[f"{flux.axis}_velocity"] * carried, 0.0)
             result[f"{flux.tracer}_within_{flux.axis}"] = self._total(member, flux, time) - mean
         if self.has_buoyancy:
             parts = {
@@ -232,7 +306,7 @@ class Ensemble:
         return result | self._active_fields(member, raw, time)
 
     def _active_fields(
-        self, member: Member, raw: dict[str, FloatArray], time: int
+        self, member: Member, raw: dict[str, npt.NDArray[np.floating]], time: int
     ) -> dict[str, FloatArray]:
         mask = self.grid.geometry.mask
         result = {
@@ -251,19 +325,18 @@ class Ensemble:
         face = self._table.grid.faces.get(part)  # type: ignore[call-overload]
         return str(face) if face in ALONG else None
 
-    def _velocity(self, member: Member, part: str, time: int) -> FloatArray:
-        """Read a velocity at cell centres, zero on land."""
+    def _velocity(self, member: Member, part: str, time: int) -> npt.NDArray[np.floating]:
+        """Read a velocity at cell centres."""
         name, face = getattr(self.roles, part), self._face(part)
+        convert = self._conversions.velocities[part].where_needed
+        if face is None:
+            return convert(self._checked(member, name, time))
         values = self._read(member, name, time)
         finite = np.isfinite(values)
         self._refuse_absent(finite, member, name, time)
-        if face is None:
-            self._require(self.grid.geometry.mask, finite, member, name, time)
-        else:
-            self._require(self._open_faces[part], finite, member, name, time)
-            self._refuse_stray(self._walls[part] & finite, member, name, time)
-        centred = to_centres(values, face, self._cells)
-        return np.where(self.grid.geometry.mask, self._conversions.velocities[part](centred), 0.0)
+        self._require(self._open_faces[part], finite, member, name, time)
+        self._refuse_stray(self._walls[part] & finite, member, name, time)
+        return convert(to_centres(values, face, self._cells))
 
     def _upward_velocity(self, member: Member, name: str, time: int) -> FloatArray:
         """Read the upward velocity at cell centres, zero on land."""
@@ -320,7 +393,8 @@ class Ensemble:
         SourceError
             If a value in the sea is missing or a file cannot be read.
         """
-        return np.stack([self._scalar(member, name, time) for member in self.members])
+        read = [self._checked(member, name, time) for member in self.members]
+        return np.stack(read).astype(np.float64, copy=False)
 
     def _total(self, member: Member, flux: TotalFlux, time: int) -> FloatArray:
         """Read a total flux at cell centres, zero on land."""
@@ -336,10 +410,12 @@ class Ensemble:
         self._require(needed, np.isfinite(values), member, flux.name, time)
         return np.where(mask, flux.at(time) * to_centres(values, face, self._cells), 0.0)
 
-    def _scalar(self, member: Member, name: str, time: int) -> FloatArray:
+    def _checked(self, member: Member, name: str, time: int) -> npt.NDArray[np.floating]:
         """Read a field at cell centres as the files have it, checked against the mask."""
-        values = self._read(member, name, time)
+        values = self._as_stored(member, name, time)
         finite, mask = np.isfinite(values), self.grid.geometry.mask
+        if np.array_equal(finite, mask):
+            return values
         self._refuse_absent(finite, member, name, time)
         self._require(mask, finite, member, name, time)
         if name in self.tracers:
@@ -408,6 +484,10 @@ class Ensemble:
 
     def _read(self, member: Member, name: str, time: int) -> FloatArray:
         """Read one field of one member, (layer, y, x), the top layer first."""
+        return self._as_stored(member, name, time).astype(np.float64, copy=False)
+
+    def _as_stored(self, member: Member, name: str, time: int) -> npt.NDArray[Any]:
+        """Read one field of one member in the precision of the files."""
         start = time - time % self._block_times
         if start != self._block_start:
             self._block.clear()
@@ -416,7 +496,7 @@ class Ensemble:
         if key not in self._block:
             self._block[key] = self._load(member, name, start)
         block = self._block[key]
-        values = np.asarray(block[member.index, time - start], dtype=np.float64)
+        values: npt.NDArray[Any] = block[member.index, time - start]
         return values[::-1] if self._top_last else values
 
     def _load(self, member: Member, name: str, start: int) -> npt.NDArray[Any]:
@@ -425,9 +505,22 @@ class Ensemble:
         time, layer = self.axes.time, self.axes.layer
         place = {} if time is None else {time: slice(start, start + self._block_times)}
         lead = [dim for dim in (member.dimension, time) if dim is not None]
+        along_y = [dim for dim in variable.dims if dim not in lead][-2]
+        pieces: tuple[slice, ...] = (slice(None),)
+        if self._band is not None:
+            cells = member.dataset.variables[self.tracers[0]].sizes[self.axes.y]
+            pieces = self._band.of_size(variable.sizes[along_y], cells)
         try:
-            part = variable.isel(place).transpose(*lead, ...)
-            values = np.asarray(part.values)
+            parts = [
+                self._stored.read(member.path, member.dataset, name, {**place, along_y: piece})
+                for piece in pieces
+            ]
+            axis = variable.dims.index(along_y)
+            values = parts[0] if len(parts) == 1 else np.concatenate(parts, axis=axis)
+            # Some files have members or times elsewhere than in front.
+            values = np.moveaxis(
+                values, [variable.dims.index(dim) for dim in lead], range(len(lead))
+            )
         except (OSError, ValueError, RuntimeError, KeyError) as error:
             raise SourceError(
                 f"cannot be read: {first_line(error)}",
@@ -459,6 +552,7 @@ class Ensemble:
         variable = first.dataset[self.tracers[0]]
         count = variable.sizes[self.axes.time] if self.axes.time is not None else 1
         one = variable.nbytes / max(count, 1) * len(self.roles.fields)
+        one *= self._cells.rows / variable.sizes[self.axes.y]
         if first.dimension is None:
             one *= len(self.members)
         return int(max(1, min(count, BLOCK_BYTES // max(one, 1))))

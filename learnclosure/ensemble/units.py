@@ -62,7 +62,7 @@ class Conversion(NamedTuple):
     offset: float
     units: str
 
-    def __call__(self, values: FloatArray) -> FloatArray:
+    def __call__(self, values: npt.NDArray[np.floating]) -> FloatArray:
         """Convert values.
 
         Parameters
@@ -77,6 +77,19 @@ class Conversion(NamedTuple):
         if self.factor != 1.0:
             converted = converted * self.factor
         return converted + self.offset if self.offset else converted
+
+    def where_needed(self, values: npt.NDArray[np.floating]) -> npt.NDArray[np.floating]:
+        """Convert values, leaving those that need it not in their own precision.
+
+        Parameters
+        ----------
+        values : ndarray
+
+        Returns
+        -------
+        ndarray
+        """
+        return values if self.factor == 1.0 and not self.offset else self(values)
 
 
 @cache

@@ -15,6 +15,11 @@ from learnclosure.errors import LearnclosureError, SimulationError
 Progress = Callable[[str, float, str], None]
 Job = Callable[..., object]
 
+
+class _DeadError(SimulationError):
+    """A process ended without a word."""
+
+
 PATIENCE = 10.0
 """Seconds a stopped process gets to remove what it was writing."""
 
@@ -59,7 +64,7 @@ def _collect(name: str, channel: Connection, progress: Progress) -> bool:
     try:
         kind, content = channel.recv()
     except EOFError:
-        raise SimulationError(
+        raise _DeadError(
             "its process ended without a word",
             where=name,
             remedy="look for a message above and for a lack of memory, then start again",
@@ -71,7 +76,9 @@ def _collect(name: str, channel: Connection, progress: Progress) -> bool:
     return bool(kind == "done")
 
 
-def run_in_processes(jobs: Mapping[str, Job], workers: int, progress: Progress) -> None:
+def run_in_processes(
+    jobs: Mapping[str, Job], workers: int, progress: Progress, *, attempts: int = 1
+) -> None:
     """Run jobs, some at a time, each in a process of its own.
 
     Parameters
@@ -82,6 +89,8 @@ def run_in_processes(jobs: Mapping[str, Job], workers: int, progress: Progress) 
         Jobs run at once. With one worker or one job nothing is started: they run here.
     progress : callable
         Called here with what the jobs report.
+    attempts : int, optional
+        How often a job is started whose process dies.
 
     Raises
     ------
@@ -98,10 +107,12 @@ def run_in_processes(jobs: Mapping[str, Job], workers: int, progress: Progress) 
     waiting = dict(jobs)
     running: dict[str, BaseProcess] = {}
     channels: dict[Any, str] = {}
+    left = dict.fromkeys(jobs, attempts)
     try:
         while waiting or running:
             while waiting and len(running) < workers:
                 name = next(iter(waiting))
+                left[name] -= 1
                 ours, theirs = context.Pipe(duplex=False)
                 process = context.Process(
                     target=_serve, args=(name, waiting.pop(name), theirs), daemon=True
@@ -111,7 +122,14 @@ def run_in_processes(jobs: Mapping[str, Job], workers: int, progress: Progress) 
                 running[name], channels[ours] = process, name
             for channel in wait(list(channels)):
                 name = channels[channel]
-                if _collect(name, channel, progress):  # type: ignore[arg-type]
+                try:
+                    done = _collect(name, channel, progress)  # type: ignore[arg-type]
+                except _DeadError:
+                    if not left[name]:
+                        raise
+                    waiting[name] = jobs[name]
+                    done = True
+                if done:
                     running.pop(name).join()
                     channels.pop(channel)
     finally:
