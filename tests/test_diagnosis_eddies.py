@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from itertools import pairwise
+
 import numpy as np
 import pytest
 from hypothesis import given, settings
@@ -246,7 +248,7 @@ def test_any_sharing_of_times_and_any_order_of_merging_give_the_same(kind, cuts,
     whole = Accumulation(ensemble, Coarsening(grid, 2), "ensemble")
     bounds = sorted({0, *cuts, 11})
     chunk = type(whole.chunks()[0])
-    parts = [whole.run(chunk(0, a, b)) for a, b in zip(bounds, bounds[1:], strict=False)]
+    parts = [whole.run(chunk(0, a, b)) for a, b in pairwise(bounds)]
     order.shuffle(parts)
     total = MomentState({})
     for part in parts:
