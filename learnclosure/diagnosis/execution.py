@@ -17,6 +17,8 @@ from learnclosure.diagnosis.eddies import Accumulation, Chunk
 from learnclosure.diagnosis.moment_sums import MomentState
 from learnclosure.errors import DiagnosisError, InputError
 
+PATIENCE = 20.0
+"""Seconds a cluster gets to answer."""
 ATTEMPTS = 3
 """Times a chunk is given out before its process is taken to die of it."""
 
@@ -146,7 +148,10 @@ def _in_processes(
 
 
 def _pool(workers: int, stack: ExitStack) -> ProcessPoolExecutor:
-    pool = ProcessPoolExecutor(workers, mp_context=get_context("spawn"))
+    context = get_context("forkserver")
+    # Libraries are loaded once, in the server all workers are forked from.
+    context.set_forkserver_preload([__name__])
+    pool = ProcessPoolExecutor(workers, mp_context=context)
     stack.callback(pool.shutdown, wait=False, cancel_futures=True)
     return pool
 
@@ -183,7 +188,7 @@ def _connected(address: str) -> Any:
             remedy="install learnclosure[cluster], or use --workers",
         ) from None
     try:
-        return Client(address, timeout=20)
+        return Client(address, timeout=PATIENCE)
     except (OSError, ValueError) as error:
         raise InputError(
             "there is no dask scheduler at the address",

@@ -60,10 +60,12 @@ def _depart(values, area, mean):  # type: ignore[no-untyped-def]
 def _group_sums(plan, area, values, group, lead, product, apart):  # type: ignore[no-untyped-def]
     """Sum products of departures, times area, and departures over one group."""
     fields, members, points = values.shape
+    alone = plan.sizes[group] == 1
+    wanted = fields if plan.halves or plan.left_out or plan.kept_fields > 0 else 0
     product[:] = 0.0
-    apart[:] = 0.0
+    apart[:wanted] = 0.0
     for member in range(group, members, len(plan.sizes)):
-        for field in range(fields):
+        for field in range(wanted):
             for point in range(points):
                 apart[field, point] += values[field, member, point]
         for number in range(len(plan.leads)):
@@ -72,8 +74,12 @@ def _group_sums(plan, area, values, group, lead, product, apart):  # type: ignor
                 lead[number, point] = area[point] * values[field, member, point]
         for pair in range(len(plan.pair_lead)):
             number, field = plan.pair_lead[pair], plan.pair_field[pair]
-            for point in range(points):
-                product[pair, point] += lead[number, point] * values[field, member, point]
+            if alone:
+                for point in range(points):
+                    product[pair, point] = lead[number, point] * values[field, member, point]
+            else:
+                for point in range(points):
+                    product[pair, point] += lead[number, point] * values[field, member, point]
 
 
 @compiled
@@ -213,10 +219,10 @@ def add_moments(source, plan, area, first_block_row, whole, halves, groups, left
     buffer = np.empty(fields * members * block_rows * step)
     area_buffer, mean_buffer = np.empty(block_rows * step), np.empty(fields * block_rows * step)
     blocks = step // plan.factor
-    local_whole = np.zeros((whole.shape[0], blocks))
-    local_halves = np.zeros((2, whole.shape[0], blocks))
-    local_groups = np.zeros((groups.shape[0], groups.shape[1], blocks))
-    local_left = np.zeros((left.shape[0], left.shape[1], blocks))
+    channels = whole.shape[0]
+    groups_size, left_size = groups.shape[0] * groups.shape[1], left.shape[0] * left.shape[1]
+    local_whole, local_halves = np.zeros(channels * blocks), np.zeros(2 * channels * blocks)
+    local_groups, local_left = np.zeros(groups_size * blocks), np.zeros(left_size * blocks)
     missing = 0
     for layer in range(layers):
         for row in range(0, rows, plan.factor):
@@ -232,8 +238,11 @@ def add_moments(source, plan, area, first_block_row, whole, halves, groups, left
                 if not (here > 0.0).any():
                     continue
                 count = -(-tile.columns // plan.factor)
-                first, second = local_whole[:, :count], local_halves[:, :, :count]
-                third, fourth = local_groups[:, :, :count], local_left[:, :, :count]
+                # Contiguous views, which the compiler can run through several places at once.
+                first = local_whole[: channels * count].reshape((channels, count))
+                second = local_halves[: 2 * channels * count].reshape((2, channels, count))
+                third = local_groups[: groups_size * count].reshape((*groups.shape[:2], count))
+                fourth = local_left[: left_size * count].reshape((*left.shape[:2], count))
                 values = buffer[: fields * members * points].reshape((fields, members, points))
                 mean = mean_buffer[: fields * points].reshape((fields, points))
                 load(source, tile, values.reshape((fields, members, tile.rows, tile.columns)))

@@ -18,8 +18,8 @@ def _weigh(plan, area, values, weight):  # type: ignore[no-untyped-def]
         if plan.weighting > 0:
             for point in range(points):
                 thick = values[plan.thickness, member, point]
-                # No layer is where thickness is negative or no number.
                 present = thick > 0.0 and area[point] > 0.0
+                missing += 1 if area[point] > 0.0 and not thick >= 0.0 else 0
                 own = thick if plan.weighting == 1 else 1.0
                 weight[member, point] = own if present else 0.0
         for field in range(fields):
