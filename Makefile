@@ -14,7 +14,7 @@ demo: $(VENV)/run.stamp
 	$(BIN)/learnclosure demo
 
 test: $(VENV)/test.stamp
-	$(BIN)/python -m pytest
+	$(BIN)/python -m pytest --numprocesses 2 --dist loadfile
 
 check: $(VENV)/test.stamp
 	$(BIN)/ruff format --check .

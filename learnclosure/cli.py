@@ -215,6 +215,7 @@ def inspect(study_file: Path | None, features: bool, target_error: float, as_jso
 @CLUSTER
 def diagnose(study_file: Path, workers: int, cluster: str | None) -> None:
     """Compute eddy statistics and the transport tensor of every region."""
+    from learnclosure.diagnosis.artefact import read_cautions
     from learnclosure.study import read_study
     from learnclosure.workflow import artefacts, diagnose_study
 
@@ -222,7 +223,10 @@ def diagnose(study_file: Path, workers: int, cluster: str | None) -> None:
     with progress_bars() as progress:
         diagnose_study(study, progress=progress, workers=workers, cluster=cluster)
     for table in study.ensembles:
-        console.print(str(artefacts(study).statistics(table.name)), markup=False, soft_wrap=True)
+        path = artefacts(study).statistics(table.name)
+        console.print(str(path), markup=False, soft_wrap=True)
+        for said in read_cautions(path):
+            console.print(f"  {table.name}: {said}", markup=False, soft_wrap=True)
 
 
 @commands.command(epilog=_example("learnclosure train study.toml"))

@@ -42,16 +42,22 @@ def feature_listing() -> Table:
     """
     table = _table(
         f"what a closure may use: {len(INPUTS)} inputs a host gives, {len(FEATURES)} features "
-        "made of them", "name", "kind", "group", "units", "parity", "locality", "meaning",
-        "validity", "source",
+        "made of them", "name", "group", "units, parity, needs", "meaning, validity, source",
     )  # fmt: skip
+    table.columns[0].no_wrap = True
+    table.show_lines = True
     for quantity in (*INPUTS.values(), *FEATURES.values()):
-        kind = f"{quantity.group}, eddy energy" if quantity.energy else quantity.group
-        groups = ("standard",) * quantity.standard + (quantity.topic,) * bool(quantity.topic)
+        groups: tuple[str, ...] = ("standard",) * quantity.standard
+        groups += (quantity.topic,) * bool(quantity.topic)
+        if not groups:
+            groups = (quantity.group, "eddy energy") if quantity.energy else (quantity.group,)
+        meaning = (quantity.long_name, quantity.validity, quantity.source)
         table.add_row(
-            quantity.name, kind, ", ".join(groups), quantity.units, quantity.parity,
-            quantity.locality, quantity.long_name, quantity.validity, quantity.source,
-        )  # fmt: skip
+            quantity.name,
+            ", ".join(groups),
+            f"{quantity.units}, {quantity.parity}, {quantity.locality}",
+            "\n".join(part for part in meaning if part),
+        )
     return table
 
 

@@ -180,6 +180,51 @@ STATISTICS: dict[str, Quantity] = _rows(
     ],
 )  # fmt: skip
 
+DEPTH_STATISTICS: dict[str, Quantity] = _rows(
+    "statistic",
+    [
+        *(
+            Quantity(
+                f"{prefix}depth_tensor_{row}{column}", f"K{row}{column}", "m2 s-1",
+                f"eddy transport tensor in depth axes{how}, flux along {row} down the gradient "
+                f"along {column}", "statistic", parity="tensor", locality="column",
+                source="J = -K grad C; Plumb and Mahlman 1987, J. Atmos. Sci. 44, 298-327; the "
+                "horizontal block is the isoneutral tensor in the small-slope form",
+            )
+            for prefix, how in (
+                ("", ""), ("least_squares_", " by plain least squares in each cell"),
+            )
+            for row in "xyz"
+            for column in "xyz"
+        ),
+        Quantity(
+            "depth_condition_number", "cond", "1",
+            "condition number of the matrix of weighted and stretched mean tracer gradients",
+            "statistic",
+        ),
+        *(
+            Quantity(
+                f"isoneutral_slope_{axis}", f"S{axis}", "1",
+                f"slope along {axis} of isoneutral surfaces or of the middle of the layer",
+                "statistic", parity="vector", locality="column",
+                validity="missing where the column is less stable than N2 = 1e-8 s-2",
+            )
+            for axis in "xy"
+        ),
+        Quantity(
+            "skew_diffusivity", "kGM", "m2 s-1",
+            "coefficient of Gent and McWilliams that best fits the antisymmetric part of the "
+            "tensor in depth axes", "statistic", locality="column",
+            source="Griffies 1998, J. Phys. Oceanogr. 28, 831-841",
+        ),
+        Quantity(
+            "valid_share", "", "1",
+            "share of members and times in which the layer is there", "statistic",
+        ),
+    ],
+)  # fmt: skip
+"""Statistics only some ensembles allow: of levels with upward velocity and of layers."""
+
 TENSOR_COMPONENTS: tuple[str, ...] = tuple(
     f"transport_tensor_{row}{column}" for row in "xy" for column in "xy"
 )

@@ -7,6 +7,7 @@ All numbers are in SI units unless the description says otherwise.
 from __future__ import annotations
 
 import tomllib
+from itertools import pairwise
 from pathlib import Path
 from typing import Annotated, Literal, get_args
 
@@ -24,7 +25,7 @@ from learnclosure.errors import StudyError
 from learnclosure.features.frames import Frame
 from learnclosure.features.point_features import FeatureGroup
 
-Face = Literal["center", "east", "west", "north", "south"]
+Face = Literal["center", "east", "west", "north", "south", "top", "bottom"]
 Family = Literal["mean-field", "local-energy"]
 Regressor = Literal["ridge", "extra-trees", "histogram-boosting", "mlp", "trees-and-mlp"]
 Target = Literal["linear", "log-cholesky"]
@@ -65,6 +66,7 @@ class VariableNames(Section):
 
     x_velocity: str | None = Field(None, description="velocity along x")
     y_velocity: str | None = Field(None, description="velocity along y")
+    z_velocity: str | None = Field(None, description="upward velocity, for tensors in depth axes")
     tracers: tuple[str, ...] | None = Field(
         None, description="tracers the tensor is determined from, at least two"
     )
@@ -79,6 +81,12 @@ class VariableNames(Section):
         description="total fluxes along x and y by tracer, where the model averaged or summed "
         "them over its steps; velocities and tracers are then means over the same time",
     )
+    potential_vorticity: str | None = Field(
+        None, description="potential vorticity, for the active side of the diagnosis"
+    )
+    thickness: str | None = Field(
+        None, description="layer thickness at each time, m, for the active side of the diagnosis"
+    )
 
 
 class GridLayout(Section):
@@ -90,7 +98,9 @@ class GridLayout(Section):
     time: str | None = Field(None, description="time dimension")
     member: str | None = Field(None, description="member dimension, if members share a file")
     periodic: tuple[Literal["x", "y"], ...] | None = Field(None, description="periodic axes")
-    faces: dict[Literal["x_velocity", "y_velocity", "total_flux_x", "total_flux_y"], Face] = Field(
+    faces: dict[
+        Literal["x_velocity", "y_velocity", "z_velocity", "total_flux_x", "total_flux_y"], Face
+    ] = Field(
         default_factory=dict,
         description="face of the cell on which a velocity or total flux sits; the centre if "
         "not named, and for fluxes where the velocity sits",
@@ -119,8 +129,21 @@ class GridLayout(Section):
     latitude: str | float | None = Field(
         None, description="variable or value of the latitude, degrees north"
     )
+    potential_vorticity_gradient: float | tuple[float, ...] | None = Field(
+        None, description="gradient along y that potential_vorticity leaves out, one or one a layer"
+    )
+    thickness_gradient: float | tuple[float, ...] | None = Field(
+        None, description="gradient along y that thickness leaves out, one or one a layer, m per m"
+    )
     dx: str | float | None = Field(None, description="variable or value of the cell width, m")
     dy: str | float | None = Field(None, description="variable or value of the cell width, m")
+
+    @model_validator(mode="after")
+    def _faces_fit(self) -> GridLayout:
+        for part, face in self.faces.items():
+            if face != "center" and (face in ("top", "bottom")) != (part == "z_velocity"):
+                raise ValueError(f"{part} cannot sit on the {face} face of a cell")
+        return self
 
 
 class Seawater(Section):
@@ -156,6 +179,43 @@ class EnsembleTable(Section):
         return (self.files,) if isinstance(self.files, str) else self.files
 
 
+class LayerSettings(Section):
+    """Density layers that levels are remapped to, in each member and at each time."""
+
+    quantity: str = Field(
+        "potential-density",
+        description="'potential-density', 'buoyancy', 'temperature' or a variable of the files",
+    )
+    reference_pressure: float | str = Field(
+        2000.0, description="potential density: sea pressure in dbar, or with its unit as text"
+    )
+    edges: tuple[float, ...] = Field(
+        (), description="values at the interfaces between layers; the end layers are open"
+    )
+    units: str | None = Field(None, description="units of the edges; SI if not given")
+    count: int | None = Field(
+        None, ge=2, le=200, description="number of layers of equal volume, in place of edges"
+    )
+    reconstruction: Literal["linear", "constant"] = Field(
+        "linear", description="profiles between and within levels"
+    )
+    least_thickness: float = Field(
+        1.0, gt=0, description="least mean thickness of a layer in a cell that counts as sea, m"
+    )
+    least_share: float = Field(
+        0.5, gt=0, le=1, description="least share of members and times that have the layer there"
+    )
+
+    @model_validator(mode="after")
+    def _one_choice(self) -> LayerSettings:
+        if bool(self.edges) == (self.count is not None):
+            raise ValueError("layers need either 'edges' or 'count'")
+        steps = [after - before for before, after in pairwise(self.edges)]
+        if not (all(step > 0 for step in steps) or all(step < 0 for step in steps)):
+            raise ValueError("edges must grow or fall throughout")
+        return self
+
+
 class DiagnosisSettings(Section):
     """How eddy statistics and the transport tensor are computed."""
 
@@ -163,6 +223,12 @@ class DiagnosisSettings(Section):
         "ensemble",
         description="eddies are departures from the ensemble mean, the same and what coarse "
         "cells hide, or departures from each member's time mean",
+    )
+    averaging: Literal["thickness-weighted", "reynolds"] | None = Field(
+        None, description="averages; thickness-weighted by default on layers remapped to"
+    )
+    layers: LayerSettings | None = Field(
+        None, description="density layers that levels are remapped to before averaging"
     )
     coarsen: int = Field(2, ge=1, le=64, description="cells per coarse cell along x and y")
     smoothing_length: float = Field(

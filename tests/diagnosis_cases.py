@@ -51,6 +51,8 @@ class MemoryEnsemble:
     units: dict[str, str] = field(default_factory=dict)
     assumptions: tuple[str, ...] = ("resting thickness is the mean thickness",)
     asked: list[int] = field(default_factory=list)
+    active: tuple[str, ...] = ()
+    left_out_gradients: dict[str, np.ndarray] = field(default_factory=dict)
 
     @property
     def member_labels(self) -> tuple[int, ...]:

@@ -233,3 +233,31 @@ def test_leverages_of_the_tracers_used_add_up_to_two():
     equations = normal_equations(slopes, slopes, AREA)
     total = sum(leverage(equations, slope, AREA) for slope in slopes)
     np.testing.assert_allclose(total, 2.0, rtol=1e-10)
+
+
+def test_a_known_relaxation_time_frees_the_tensor_of_its_bias():
+    # Spinning velocities, tracers relaxed at the rate lambda (check: Taylor 1922 with the
+    # memory shortened to 1/(1/T + lambda); derived): K(0) comes back from K(lambda).
+    ub, T, spin, rate = 0.1, 2e5, 2.5e-6, 5e-6
+    random = np.random.default_rng(0)
+    members = 4000
+    w = 1.0 / T + rate - 1j * spin
+    # Jointly Gaussian velocity and displacement with the exact stationary covariances.
+    cross = ub**2 / w
+    u = ub * (random.normal(size=members) + 1j * random.normal(size=members))
+    noise = random.normal(size=members) + 1j * random.normal(size=members)
+    X = np.conj(cross) / ub**2 * u + 1e3 * noise
+    u, X = u[None], X[None]
+    chosen = DiagnosisSettings(
+        coarsen=1, floor=0.0, floor_method="projection", relaxation_time=1.0 / rate,
+        ceiling_draws=0,
+    )  # fmt: skip
+    found = diagnose(uniform_eddies(box(), u, X), chosen)
+    exact = ub**2 / (1.0 / T - 1j * spin)
+    biased = float(found["transport_tensor_xx"].mean())
+    freed = float(found["transport_tensor_xx_without_relaxation"].mean())
+    turned = float(found["transport_tensor_yx_without_relaxation"].mean())
+    assert biased == pytest.approx(np.real(ub**2 / w), rel=0.06)
+    assert freed == pytest.approx(np.real(exact), rel=0.12)
+    assert turned == pytest.approx(np.imag(exact), rel=0.25)
+    assert (found["relaxation_amplification"] > 1.0).all()

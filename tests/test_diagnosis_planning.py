@@ -285,7 +285,10 @@ class Accumulating(MemoryEnsemble):
     def fields(self, time):
         """Add fluxes inside the sampling window."""
         found = super().fields(time)
-        return {**found, **{f"{name}_within_x": 0.0 * found[name] for name in self.tracers}}
+        return {
+            **found,
+            **{f"{t}_within_{axis}": 0.0 * found[t] for t in self.tracers for axis in "xy"},
+        }
 
 
 def test_accumulated_fluxes_are_told_from_snapshots():

@@ -55,6 +55,8 @@ def test_tracers_keep_their_unit_unless_it_is_a_temperature():
         ("PSU", "practical salinity has the unit '1'"),
         ("ppt", "parts per trillion"),
         ("Sv", "sievert"),
+        ("Sv m-1", "sievert"),
+        ("1e6 ppt m s-1", "parts per trillion"),
         ("level", "correct the units attribute"),
         ("unitless", "correct the units attribute"),
     ],

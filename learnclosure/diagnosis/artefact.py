@@ -11,7 +11,13 @@ import numpy.typing as npt
 import xarray as xr
 
 from learnclosure.atomic import atomic_path
-from learnclosure.quantities import LAYER_FIELD, MEAN_STATE, STATISTICS, Quantity
+from learnclosure.quantities import (
+    DEPTH_STATISTICS,
+    LAYER_FIELD,
+    MEAN_STATE,
+    STATISTICS,
+    Quantity,
+)
 
 FloatArray = npt.NDArray[np.float64]
 
@@ -20,7 +26,7 @@ _FLUX = "time mean of the ensemble covariance of velocity and"
 
 def named_quantity(name: str) -> Quantity:
     """Return the row of a mean-state or statistic quantity."""
-    return MEAN_STATE[name] if name in MEAN_STATE else STATISTICS[name]
+    return {**MEAN_STATE, **STATISTICS, **DEPTH_STATISTICS}[name]
 
 
 class StatisticsBuilder:
@@ -134,6 +140,23 @@ class StatisticsBuilder:
     def build(self, attributes: Mapping[str, Any]) -> xr.Dataset:
         """Return the dataset with global attributes."""
         return xr.Dataset(self.variables, self.coordinates, dict(attributes))
+
+
+def read_cautions(path: Path) -> list[str]:
+    """Read what a diagnosis says of its own weaknesses.
+
+    Parameters
+    ----------
+    path : Path
+        A ``statistics.nc``.
+
+    Returns
+    -------
+    list of str
+        One sentence each.
+    """
+    with xr.open_dataset(path, engine="h5netcdf") as statistics:
+        return [said for said in str(statistics.attrs.get("cautions", "")).split("; ") if said]
 
 
 def write_statistics(statistics: xr.Dataset, path: Path) -> None:

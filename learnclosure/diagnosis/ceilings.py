@@ -15,7 +15,7 @@ draws is added.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import numpy.typing as npt
@@ -253,6 +253,7 @@ def estimate_ceilings(
     valid: BoolArray,
     tracers: tuple[str, ...],
     *,
+    members: int,
     draws: int,
     seed: int = 0,
 ) -> Ceilings:
@@ -267,12 +268,15 @@ def estimate_ceilings(
         Of all members.
     halves : tuple of GroupEstimate
         Of two halves of the members.
-    left_out : ndarray, shape (member, layer, y, x, 2, 2), m2 s-1
-        Smooth tensors without each member in turn.
+    left_out : ndarray, shape (group, layer, y, x, 2, 2), m2 s-1
+        Smooth tensors without each member, or each group of members, in turn.
     valid : ndarray of bool, shape (layer, y, x)
         Cells that count.
     tracers : tuple of str
         Those whose fluxes count.
+    members : int
+        Members of the ensemble. Where these are more than the groups, sub-ensembles are made
+        of whole groups and counted in members.
     draws : int
         Random pairs of halves for each size of sub-ensemble.
     seed : int, optional
@@ -284,6 +288,7 @@ def estimate_ceilings(
     weights = np.where(valid, estimator.area, 0.0)
     measurer = _Measurer(estimator, weights, tracers)
     replicates = _replicates(measurer, moments, measurer.of_group(whole), left_out, seed)
+    each = members / len(left_out)
     members, times = len(left_out), sum(moments.block_times)
     by_size = _member_points(measurer, moments, draws, seed)
     by_time = _snapshot_points(measurer, moments, halves)
@@ -296,7 +301,9 @@ def estimate_ceilings(
         for size, drawn in by_size.items():
             shared, variance = subset_noise(members, size // 2)
             points.append((size, _stack(drawn, name), (shared, variance, variance)))
-        of_members[name] = _curve(points, more, noise, 1.0, 1.0)
+        curve = _curve(points, more, noise, 1.0, 1.0)
+        counts = np.round(each * curve.counts).astype(np.int64)
+        of_members[name] = replace(curve, counts=counts)
         # Noise in units of that of one degree of freedom over all times.
         points = [
             (count, _stack(drawn, name), (0.0, own[0] * times / count, own[1] * times / count))

@@ -17,19 +17,25 @@ from learnclosure.diagnosis.budget import SMOOTHING_FACTORS
 from learnclosure.diagnosis.ceilings import fits_needed
 from learnclosure.diagnosis.coarse import Coarsening
 from learnclosure.diagnosis.diagnose import diagnose
+from learnclosure.diagnosis.eddies import BAND_BYTES
 from learnclosure.diagnosis.estimate import LEAST_MEMBERS_FOR_JACKKNIFE, Estimator
+from learnclosure.diagnosis.moment_layout import group_sizes
 from learnclosure.diagnosis.moments import TIME_BLOCKS, EnsembleSource, Moments
 from learnclosure.diagnosis.probe import Probe, Sample
 from learnclosure.ensemble.sources import LEAST_MEMBERS_FOR_HALVES
 from learnclosure.features.artefact import features_dataset
 from learnclosure.study import DiagnosisSettings
 
-PROGRAM_BYTES = 165e6
+PROGRAM_BYTES = 290e6
 """Python with all libraries loaded and files open (measured)."""
 FACTOR_BYTES = 2.5e3
 """Sparse factors of one layer, bytes a cell (measured between 4e3 and 2e4 cells)."""
-OVERHEAD_BYTES = 1.5e3
-"""Bytes of a variable's own header and attributes in a file (measured, 1.25e3 to 1.9e3)."""
+OVERHEAD_BYTES = 1.3e3
+"""Bytes of a variable's own header and attributes in a file (measured)."""
+CROWDED_BYTES = 4.1e3
+"""The same where there are more attributes than HDF5 keeps in the header (measured)."""
+CROWDED_ATTRIBUTES = 6
+"""Attributes of our own from which, with the library's, there are too many for the header."""
 CHECKSUM_RATE = 1.0e9
 """Bytes a second that are read and hashed (measured)."""
 PASSES = 1
@@ -92,7 +98,9 @@ def inversions_needed(members: int, times: int, tracers: int, withheld: int, dra
 
 def _size(dataset: xr.Dataset, full: dict[str, int]) -> float:
     """Size of a file with the variables of a small dataset on larger dimensions."""
-    return OVERHEAD_BYTES * len(dataset.variables) + sum(
+    crowded = [len(v.attrs) >= CROWDED_ATTRIBUTES for v in dataset.variables.values()]
+    headers = sum(CROWDED_BYTES if many else OVERHEAD_BYTES for many in crowded)
+    return headers + sum(
         float(variable.dtype.itemsize)
         * math.prod(full.get(str(dim), size) for dim, size in variable.sizes.items())
         for variable in dataset.variables.values()
@@ -154,16 +162,17 @@ def predicted_memory(
     coarse = coarsening.geometry.mask
     at_once = min(times, int(getattr(ensemble, "times_read_at_once", 1)))
     one_time = 8.0 * members * layers * rows * columns * (2 + tracers + ensemble.has_buoyancy)
-    sums = 8.0 * members * coarse.size * 3 * tracers
-    blocks = 8.0 * 2 * min(TIME_BLOCKS, times) * coarse.size * 3 * (1 + tracers)
-    tensors = 8.0 * members * coarse.size * 8
+    scalars = tracers + len(ensemble.active)
+    groups = len(group_sizes(members))
+    parts = 1 + 2 * min(TIME_BLOCKS, times)
+    sums = 8.0 * coarse.size * (parts * (8 + 3 * scalars) + groups * (2 + 5 * scalars))
+    tensors = 8.0 * groups * coarse.size * 8
     factors = FACTOR_BYTES * float(coarse.sum(axis=(1, 2)).max())
     return (
         PROGRAM_BYTES
         + stored_bytes * at_once / times
-        + blocks
-        # Read, stacked, and their departures; sums, and their means.
-        + max(3.0 * one_time + sums, 2.0 * sums + tensors + factors)
+        # Read and stacked, beside the sums of a chunk and of all; or these, and what of them.
+        + max(2.0 * min(one_time, BAND_BYTES) + 2.0 * sums, 2.0 * sums + tensors + factors)
     )
 
 

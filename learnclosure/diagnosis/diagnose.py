@@ -10,11 +10,13 @@ import numpy.typing as npt
 import xarray as xr
 
 from learnclosure import __version__
+from learnclosure.diagnosis.active_artefact import add_active
 from learnclosure.diagnosis.artefact import StatisticsBuilder
 from learnclosure.diagnosis.ceiling_artefact import add_ceilings
 from learnclosure.diagnosis.ceilings import estimate_ceilings
 from learnclosure.diagnosis.coarse import Coarsening
 from learnclosure.diagnosis.degeneracy import check_information
+from learnclosure.diagnosis.depth_axes import add_depth_axes
 from learnclosure.diagnosis.eddies import describe
 from learnclosure.diagnosis.estimate import Estimator, Form, GroupEstimate, WithheldSkill
 from learnclosure.diagnosis.execution import Execution
@@ -24,6 +26,7 @@ from learnclosure.diagnosis.moments import EnsembleSource, Moments, accumulate_m
 from learnclosure.diagnosis.quality import (
     add_budget,
     add_quality,
+    add_relaxation,
     add_skill,
     cautions,
     tensor_components,
@@ -34,6 +37,7 @@ from learnclosure.diagnosis.tensor import (
     scalar_diffusivity,
     symmetric_parts,
 )
+from learnclosure.ensemble.averaging import averaged
 from learnclosure.errors import DiagnosisError
 from learnclosure.study import DiagnosisSettings
 
@@ -72,6 +76,7 @@ def diagnose(
     """
     chosen = settings or DiagnosisSettings()
     _check_tracers(ensemble)
+    ensemble = averaged(ensemble, chosen)
     report = progress or (lambda _share, _note: None)
     coarsening = Coarsening(ensemble.grid, chosen.coarsen)
     geometry = coarsening.geometry
@@ -108,6 +113,8 @@ def diagnose(
     add_quality(builder, ensemble, estimator, whole, halves, valid)
     add_budget(builder, ensemble, estimator, whole, halves, valid, error)
     add_skill(builder, skill, other_form, other_skill)
+    if chosen.relaxation_time is not None:
+        add_relaxation(builder, whole, moments.whole, chosen.relaxation_time, valid)
     if halves and left_out is not None and chosen.ceiling_draws:
         report(0.9, "ceilings")
         names = (*ensemble.tracers, *ensemble.withheld_tracers)
@@ -115,11 +122,16 @@ def diagnose(
             builder,
             estimate_ceilings(
                 moments, estimator, whole, halves, left_out, valid, names,
-                draws=chosen.ceiling_draws,
+                members=len(ensemble.member_labels), draws=chosen.ceiling_draws,
             ),
         )  # fmt: skip
+    report(0.97, "active side")
+    known = np.where(valid[..., None, None], whole.smooth.tensor, np.nan)
+    active = add_active(builder, ensemble, moments, estimator, known)
+    add_depth_axes(builder, ensemble, coarsening, moments.whole, whole.gradient, chosen)
     report(1.0, "done")
-    statistics = builder.build(_attributes(ensemble, chosen, estimator.inversion, skill))
+    attributes = _attributes(ensemble, chosen, estimator.inversion, skill)
+    statistics = builder.build({**attributes, **active})
     return statistics.assign_attrs(cautions="; ".join(cautions(statistics)))
 
 
@@ -189,6 +201,9 @@ def _add_mean_state(
     }
     for name, values in fields.items():
         builder.add_named(name, np.ascontiguousarray(values))
+    share = getattr(ensemble, "valid_share", None)
+    if share is not None:
+        builder.add_named("valid_share", coarsening.mean(share))
     if moments.halves:
         builder.add_named(
             "eddy_kinetic_energy",
@@ -316,6 +331,7 @@ def _attributes(
         "floor_method": settings.floor_method,
         "scalar_pull": inversion.pull,
         "assumptions": "; ".join(ensemble.assumptions),
+        **getattr(ensemble, "attributes", {}),
     }
     if skill is not None:
         attributes["withheld_method"] = (

@@ -26,6 +26,7 @@ from learnclosure.diagnosis.tensor import (
     leverage,
     normal_equations,
 )
+from learnclosure.ensemble.active import ACTIVE
 from learnclosure.ensemble.grid import Geometry, divergence, gradient
 from learnclosure.study import DiagnosisSettings
 
@@ -187,13 +188,13 @@ class Estimator:
         -------
         GroupEstimate
         """
-        means = {name: moments.mean[name] for name in moments.flux}
-        gradients = self.gradients(means)
+        fluxes = {name: flux for name, flux in moments.flux.items() if name not in ACTIVE}
+        gradients = self.gradients({name: moments.mean[name] for name in fluxes})
         acted_on = self.acted_on(gradients, form)
-        equations = self.equations(moments.flux, acted_on)
+        equations = self.equations(fluxes, acted_on)
         return GroupEstimate(
             gradient=gradients,
-            flux=moments.flux,
+            flux=fluxes,
             acted_on=acted_on,
             equations=equations,
             smooth=self.inversion.fit(equations),
@@ -223,7 +224,8 @@ class Estimator:
         tensors = []
         for member in range(members):
             mean, flux = moments.without_member(member)
-            equations = self.equations(flux, self.acted_on(self.gradients(mean)))
+            used = {name: mean[name] for name in self.tracers}
+            equations = self.equations(flux, self.acted_on(self.gradients(used)))
             tensors.append(self.inversion.fit(equations).tensor)
         return np.stack(tensors)
 

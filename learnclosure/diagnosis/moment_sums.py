@@ -220,5 +220,11 @@ class Finisher:
                 name: fluxes[2 * number : 2 * number + 2]
                 for number, name in enumerate(layout.scalars)
             }
+            if "bolus.left" in state.sums:
+                remaining = (self.members - size) * self.times * self.area
+                mean[THICKNESS] = _ratio(rest[0], remaining)
+                flux[THICKNESS] = _ratio(
+                    state.sums["bolus.left"][group][1:3], self.times * self.area
+                )
             found.append((mean, flux))
         return tuple(found)

@@ -19,9 +19,10 @@ Definition = Literal["ensemble", "ensemble-subgrid", "time"]
 class EnsembleSource(Protocol):
     """What the diagnosis asks of an ensemble; ``learnclosure.Ensemble`` offers it.
 
-    A source may also have ``active``, further scalars whose eddy flux is wanted;
-    ``weighted``, true if averages are weighted by the field ``thickness``; and ``gaps``,
-    true if members may be missing at places, as in layers that outcrop.
+    ``active`` are further scalars whose eddy flux is wanted, ``left_out_gradients`` uniform
+    gradients they leave out. A source may also have ``weighted``, true if averages are
+    weighted by the field ``thickness``, and ``gaps``, true if members may be missing at
+    places, as in layers that outcrop.
     """
 
     name: str
@@ -33,6 +34,8 @@ class EnsembleSource(Protocol):
     withheld_tracers: tuple[str, ...]
     units: dict[str, str]
     has_buoyancy: bool
+    active: tuple[str, ...]
+    left_out_gradients: dict[str, FloatArray]
     assumptions: tuple[str, ...]
 
     def fields(self, time: int) -> dict[str, FloatArray]:

@@ -125,8 +125,9 @@ class _Part:
         self.assumptions = ensemble.assumptions
 
     def __getattr__(self, name: str) -> Any:
-        # Asked for only what is not set above; a content checksum would read everything.
-        if name.startswith("_") or name == "input_sha256":
+        # Asked for only what is not set above; a content checksum would read everything, and
+        # reading by rows would pass by what is noted here.
+        if name.startswith("_") or name in ("input_sha256", "fields_of"):
             raise AttributeError(name)
         return getattr(self._ensemble, name)
 

@@ -15,7 +15,8 @@ from learnclosure.diagnosis.budget import (
     smoothing_check,
 )
 from learnclosure.diagnosis.estimate import Estimator, Form, GroupEstimate, WithheldSkill
-from learnclosure.diagnosis.moments import EnsembleSource
+from learnclosure.diagnosis.moments import EnsembleSource, GroupMoments
+from learnclosure.diagnosis.relaxation import without_relaxation
 from learnclosure.errors import DiagnosisError
 
 FloatArray = npt.NDArray[np.float64]
@@ -201,6 +202,43 @@ def _add_budget_fields(builder: StatisticsBuilder, budget: ErrorBudget, valid: B
             ("layer", "y", "x"),
             "share of the variance of the mean tracer gradients that is sampling noise", "1",
         )  # fmt: skip
+
+
+def add_relaxation(
+    builder: StatisticsBuilder, whole: GroupEstimate, moments: GroupMoments, seconds: float,
+    valid: BoolArray,
+) -> None:  # fmt: skip
+    """Add the tensor freed of the bias that relaxing the tracers brings.
+
+    Parameters
+    ----------
+    builder : StatisticsBuilder
+    whole : GroupEstimate
+    moments : GroupMoments
+        Of all members; holds the covariance of the velocities.
+    seconds : float, s
+        Time in which tracers are relaxed.
+    valid : ndarray of bool, shape (layer, y, x)
+    """
+    pairs = {
+        name: moments.covariance[f"{name[0]}_velocity", f"{name[1]}_velocity"]
+        for name in ("xx", "xy", "yy")
+    }
+    covariance = np.stack(
+        [np.stack([pairs["xx"], pairs["xy"]], -1), np.stack([pairs["xy"], pairs["yy"]], -1)], -2
+    )
+    found = without_relaxation(whole.smooth.tensor, covariance, seconds)
+    kept = valid & found.possible
+    for name, values in tensor_components(found.tensor).items():
+        builder.add_named(
+            f"transport_tensor_{name}", np.where(kept, values, np.nan), "_without_relaxation",
+            "freed of the bias by tracer relaxation, the",
+        )  # fmt: skip
+    builder.add(
+        "relaxation_amplification", np.where(kept, found.amplification, np.nan),
+        ("layer", "y", "x"),
+        "bound on the growth of errors by the correction for tracer relaxation", "1",
+    )  # fmt: skip
 
 
 def _root_mean_square(field: FloatArray, weights: FloatArray) -> FloatArray:

@@ -11,6 +11,7 @@ import numpy.typing as npt
 import xarray as xr
 
 from learnclosure.ensemble.roles import Roles
+from learnclosure.ensemble.upward import check_upward
 from learnclosure.errors import GridError
 from learnclosure.study import EnsembleTable, GridLayout
 
@@ -181,6 +182,10 @@ def check_points(
             )
     for part in ("x_velocity", "y_velocity"):
         _check_velocity(layout.faces.get(part), dataset, getattr(roles, part), first, axes, where)
+    if roles.z_velocity is not None:
+        check_upward(
+            layout.faces.get("z_velocity"), dataset[roles.z_velocity], first, axes.layer, where
+        )
 
 
 def _check_velocity(

@@ -30,6 +30,8 @@ class Conversions(NamedTuple):
         By part: a temperature may be a tracer as well as stratify.
     tracers : dict of str to Conversion
         By name in the files.
+    active : dict of str to Conversion
+        By part.
     before : dict of str to str
         Units in the files, by name.
     units : dict of str to str
@@ -39,6 +41,7 @@ class Conversions(NamedTuple):
     velocities: dict[str, Conversion]
     stratifying: dict[str, Conversion]
     tracers: dict[str, Conversion]
+    active: dict[str, Conversion]
     before: dict[str, str]
     units: dict[str, str]
 
@@ -76,6 +79,8 @@ def find_conversions(roles: Roles, first: Member, assumptions: list[str]) -> Con
         "x_velocity": to(roles.x_velocity, "m s-1"),
         "y_velocity": to(roles.y_velocity, "m s-1"),
     }
+    if roles.z_velocity is not None:
+        velocities["z_velocity"] = to(roles.z_velocity, "m s-1")
     tracers = {
         name: tracer_conversion(before[name], first.where(name))
         for name in (*roles.tracers, *roles.withheld_tracers)
@@ -93,8 +98,17 @@ def find_conversions(roles: Roles, first: Member, assumptions: list[str]) -> Con
             stratifying[part] = to(name, "K" if part == "temperature" else "m s-2")
     units = {roles.stratifying[part]: change.units for part, change in stratifying.items()}
     units |= {name: change.units for name, change in tracers.items()}
-    units |= {roles.x_velocity: "m s-1", roles.y_velocity: "m s-1"}
-    return Conversions(velocities, stratifying, tracers, before, units)
+    units |= {getattr(roles, part): change.units for part, change in velocities.items()}
+    active = {
+        part: to(name, "m")
+        if part == "thickness"
+        else tracer_conversion(before[name], first.where(name))
+        for part, name in roles.active.items()
+    }
+    # Under the names of the parts as well, since fields are returned under those.
+    units |= {name: active[part].units for part, name in roles.active.items()}
+    units |= {part: change.units for part, change in active.items()}
+    return Conversions(velocities, stratifying, tracers, active, before, units)
 
 
 def read_times(reader: LayoutReader) -> npt.NDArray[np.float64]:

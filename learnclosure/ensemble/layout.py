@@ -97,6 +97,8 @@ class LayoutReader:
     def standard(self, standard_name: str) -> str | None:
         """Return the name of the variable with a CF standard name, if there is just one.
 
+        Of several the one that does not vary in time is taken.
+
         Parameters
         ----------
         standard_name : str
@@ -110,7 +112,9 @@ class LayoutReader:
             for name, variable in self.dataset.variables.items()
             if variable.attrs.get("standard_name") == standard_name
         ]
-        return found[0] if len(found) == 1 else None
+        fixed = [name for name in found if self.axes.time not in self.dataset[name].dims]
+        left = found if len(found) == 1 else fixed
+        return left[0] if len(left) == 1 else None
 
     def surface(self, values: Any, part: str) -> FloatArray:
         """Spread a number, one value per row or column, or a field over (y, x).

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from contextlib import ExitStack
+from dataclasses import replace
 from functools import cached_property
 from pathlib import Path
 from types import TracebackType
@@ -12,6 +13,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
+from learnclosure.ensemble.active import check_thickness, interface_height, left_out_gradients
 from learnclosure.ensemble.agreement import check_grids_alike, check_members_alike
 from learnclosure.ensemble.assembly import build_grid
 from learnclosure.ensemble.axes import (
@@ -26,6 +28,7 @@ from learnclosure.ensemble.conversions import find_conversions, read_times
 from learnclosure.ensemble.grid import Grid
 from learnclosure.ensemble.layout import LayoutReader
 from learnclosure.ensemble.roles import find_roles
+from learnclosure.ensemble.seawater import EquationOfState
 from learnclosure.ensemble.sources import (
     Member,
     content_digest,
@@ -36,6 +39,7 @@ from learnclosure.ensemble.sources import (
 from learnclosure.ensemble.stored import Band, StoredVariables, band_of
 from learnclosure.ensemble.stratification import buoyancy_rule
 from learnclosure.ensemble.total_flux import TotalFlux, find_total_fluxes
+from learnclosure.ensemble.upward import needed_faces, upward_at_centres, upward_notes
 from learnclosure.ensemble.vertical import is_top_last
 from learnclosure.errors import SourceError
 from learnclosure.study import EnsembleTable
@@ -66,6 +70,11 @@ class Ensemble:
     units_before : dict of str to str
         Units in the files.
     has_buoyancy : bool
+    active : tuple of str
+        Fields that act on the flow: of layers ``potential_vorticity``, ``thickness`` and
+        ``interface_height``, of levels ``potential_vorticity`` and ``buoyancy``.
+    left_out_gradients : dict of str to ndarray, shape (2, layer), SI units per metre
+        Uniform gradients that active fields leave out.
     assumptions : tuple of str
         What was assumed where neither files nor study say.
     """
@@ -112,7 +121,26 @@ class Ensemble:
         notes = [*layout.assumptions, *self._find_walls(first)]
         self._find_rules(notes)
         self.has_buoyancy = self.roles.buoyancy is not None or self._buoyancy_rule is not None
+        self._find_active(table, first, notes)
+        if self.roles.z_velocity is not None:
+            notes += upward_notes(self._table.grid.faces.get("z_velocity"))
         self.assumptions = tuple(dict.fromkeys(notes))
+
+    def _find_active(self, table: EnsembleTable, first: Member, notes: list[str]) -> None:
+        names = dict(self.roles.active)
+        if self.grid.vertical == "levels" and names.pop("thickness", None) is not None:
+            self.roles = replace(self.roles, thickness=None)
+            notes.append("the thickness of levels that stand still takes no part in eddy fluxes")
+        factors = {part: self._conversions.active[part].factor for part in names}
+        shape = (self.grid.shape[0], self._top_last)
+        self.left_out_gradients = left_out_gradients(
+            table, first.dataset, names, factors, shape, notes
+        )
+        self._active_names = names
+        derived = ("interface_height",) if "thickness" in names and shape[0] > 1 else ()
+        levels = self.has_buoyancy and self.grid.vertical == "levels"
+        self.active = (*names, *derived, *(("buoyancy",) if levels else ()))
+        self.units |= {"interface_height": "m", "buoyancy": "m s-2"}
 
     def _find_rules(self, notes: list[str]) -> None:
         """Find what depends on the rows of the grid besides the grid itself."""
@@ -156,15 +184,15 @@ class Ensemble:
         -------
         dict of str to ndarray, shape (member, layer, y, x)
             ``x_velocity`` and ``y_velocity`` at cell centres in m s-1, every tracer under
-            its own name, and ``buoyancy`` in m s-2 if the ensemble has it; the top layer
-            first, zero on land. Where the files hold total fluxes of a tracer, also
-            ``<tracer>_within_x`` and ``_within_y``, its eddy flux within the window each
-            time stands for.
+            its own name, ``buoyancy`` in m s-2 if the ensemble has it and every other
+            active field; the top layer first, zero on land. Where the files hold total
+            fluxes of a tracer, also ``<tracer>_within_x`` and ``_within_y``, its eddy flux
+            within the window each time stands for.
 
         Raises
         ------
         SourceError
-            If a value in the sea is missing or a file cannot be read.
+            If a value in the sea is missing, a layer vanishes or a file cannot be read.
         """
         mask = self.grid.geometry.mask
         every = slice(None)
@@ -257,6 +285,8 @@ class Ensemble:
         raw = {name: self._checked(member, name, time) for name in self.roles.scalars}
         for name in (*self.tracers, *self.withheld_tracers):
             result[name] = self._conversions.tracers[name].where_needed(raw[name])
+        if self.roles.z_velocity is not None:
+            result["z_velocity"] = self._upward_velocity(member, self.roles.z_velocity, time)
         for flux in self._total_fluxes:
             # The flux carries the tracer without the offset that took it to SI units.
             carried = np.float64(result[flux.tracer])
@@ -273,6 +303,22 @@ class Ensemble:
             else:
                 values = self._buoyancy_rule(parts["temperature"], parts.get("salinity"))
                 result["buoyancy"] = np.where(mask, values, 0.0)
+        return result | self._active_fields(member, raw, time)
+
+    def _active_fields(
+        self, member: Member, raw: dict[str, npt.NDArray[np.floating]], time: int
+    ) -> dict[str, FloatArray]:
+        mask = self.grid.geometry.mask
+        result = {
+            part: np.where(mask, self._conversions.active[part](raw[name]), 0.0)
+            for part, name in self._active_names.items()
+        }
+        if "thickness" in result:
+            where = member.where(self._active_names["thickness"])
+            check_thickness(result["thickness"], mask, where, time)
+        if "interface_height" in self.active:
+            height = interface_height(result["thickness"], self.grid.sea_floor_depth)
+            result["interface_height"] = np.where(mask, height, 0.0)
         return result
 
     def _face(self, part: str) -> str | None:
@@ -291,6 +337,64 @@ class Ensemble:
         self._require(self._open_faces[part], finite, member, name, time)
         self._refuse_stray(self._walls[part] & finite, member, name, time)
         return convert(to_centres(values, face, self._cells))
+
+    def _upward_velocity(self, member: Member, name: str, time: int) -> FloatArray:
+        """Read the upward velocity at cell centres, zero on land."""
+        mask, face = self.grid.geometry.mask, self._table.grid.faces.get("z_velocity")
+        values = self._read(member, name, time)
+        self._require(
+            needed_faces(mask, face, len(values)), np.isfinite(values), member, name, time
+        )
+        centred = upward_at_centres(values, face, mask)
+        return np.where(mask, self._conversions.velocities["z_velocity"](centred), 0.0)
+
+    @property
+    def equation(self) -> EquationOfState | None:
+        """How buoyancy follows from temperature and salinity, if it does."""
+        return self._buoyancy_rule
+
+    def stratifying(self, time: int) -> dict[str, FloatArray]:
+        """Read what the stratification comes from and nothing else.
+
+        Parameters
+        ----------
+        time : int
+            Number of the time.
+
+        Returns
+        -------
+        dict of str to ndarray, shape (member, layer, y, x)
+            ``temperature`` in K and ``salinity`` in g kg-1, or ``buoyancy`` in m s-2; zero
+            on land.
+        """
+        mask = self.grid.geometry.mask
+        return {
+            part: np.where(mask, self._conversions.stratifying[part](self.scalar(name, time)), 0.0)
+            for part, name in self.roles.stratifying.items()
+        }
+
+    def scalar(self, name: str, time: int) -> FloatArray:
+        """Read one field at cell centres of all members, in the units of the files.
+
+        Parameters
+        ----------
+        name : str
+            Name in the files.
+        time : int
+            Number of the time.
+
+        Returns
+        -------
+        ndarray, shape (member, layer, y, x)
+            What stands on land has no meaning.
+
+        Raises
+        ------
+        SourceError
+            If a value in the sea is missing or a file cannot be read.
+        """
+        read = [self._checked(member, name, time) for member in self.members]
+        return np.stack(read).astype(np.float64, copy=False)
 
     def _total(self, member: Member, flux: TotalFlux, time: int) -> FloatArray:
         """Read a total flux at cell centres, zero on land."""

@@ -176,7 +176,9 @@ def _role_lines(ensemble: Ensemble, table: EnsembleTable) -> list[RoleLine]:
     parts = [("x_velocity", roles.x_velocity), ("y_velocity", roles.y_velocity)]
     parts += [("tracer", name) for name in ensemble.tracers]
     parts += [("withheld tracer", name) for name in ensemble.withheld_tracers]
-    for part in ("buoyancy", "temperature", "salinity"):
+    for part in (
+        "z_velocity", "buoyancy", "temperature", "salinity", "potential_vorticity", "thickness",
+    ):  # fmt: skip
         name = getattr(roles, part)
         if name is not None:
             parts.append((part, name))

@@ -7,6 +7,7 @@ from dataclasses import dataclass, field
 
 import xarray as xr
 
+from learnclosure.ensemble.active import find_active
 from learnclosure.errors import DiagnosisError, RoleError
 from learnclosure.study import EnsembleTable
 
@@ -14,6 +15,7 @@ STANDARD_NAMES = {
     "x_velocity": ("sea_water_x_velocity", "eastward_sea_water_velocity"),
     "y_velocity": ("sea_water_y_velocity", "northward_sea_water_velocity"),
 }
+UPWARD_STANDARD_NAME = "upward_sea_water_velocity"
 SCALAR_STANDARD_NAMES = {
     "temperature": (
         "sea_water_conservative_temperature",
@@ -39,8 +41,12 @@ class Roles:
     tracers, withheld_tracers : tuple of str
     buoyancy, temperature, salinity : str or None
         For the stratification, where it is not fixed in time.
+    z_velocity : str or None
+        Upward velocity.
     total_fluxes : mapping of str to tuple of str
         Total fluxes along x and y by tracer, where the model summed them over its steps.
+    potential_vorticity, thickness : str or None
+        For the active side of the diagnosis.
     """
 
     x_velocity: str
@@ -50,7 +56,16 @@ class Roles:
     buoyancy: str | None
     temperature: str | None
     salinity: str | None
+    z_velocity: str | None = None
     total_fluxes: Mapping[str, tuple[str, str]] = field(default_factory=dict)
+    potential_vorticity: str | None = None
+    thickness: str | None = None
+
+    @property
+    def active(self) -> dict[str, str]:
+        """Variables that act on the flow, by part; buoyancy is among the stratifying ones."""
+        parts = {"potential_vorticity": self.potential_vorticity, "thickness": self.thickness}
+        return {part: name for part, name in parts.items() if name is not None}
 
     @property
     def stratifying(self) -> dict[str, str]:
@@ -63,14 +78,21 @@ class Roles:
     @property
     def scalars(self) -> tuple[str, ...]:
         """All fields at cell centres, each once, tracers first."""
-        names = (*self.tracers, *self.withheld_tracers, *self.stratifying.values())
+        names = (
+            *self.tracers,
+            *self.withheld_tracers,
+            *self.stratifying.values(),
+            *self.active.values(),
+        )
         return tuple(dict.fromkeys(names))
 
     @property
     def fields(self) -> tuple[str, ...]:
         """All fields read, each once."""
+        upward = () if self.z_velocity is None else (self.z_velocity,)
         fluxes = (name for pair in self.total_fluxes.values() for name in pair)
-        return tuple(dict.fromkeys((self.x_velocity, self.y_velocity, *self.scalars, *fluxes)))
+        names = (self.x_velocity, self.y_velocity, *upward, *self.scalars, *fluxes)
+        return tuple(dict.fromkeys(names))
 
 
 def _fields(dataset: xr.Dataset) -> list[str]:
@@ -186,7 +208,7 @@ def find_roles(table: EnsembleTable, dataset: xr.Dataset, where: object) -> Role
             expected=f"two or more of {_listed(others)}",
             remedy="name them under [ensemble.variables] tracers",
         )
-    optional = {}
+    optional = find_active(table, dataset, (*tracers, *withheld), where)
     for part in ("buoyancy", "temperature", "salinity"):
         named = getattr(names, part)
         if named is not None:
@@ -194,6 +216,7 @@ def find_roles(table: EnsembleTable, dataset: xr.Dataset, where: object) -> Role
         elif table.seawater is not None:
             named = _known_scalar(dataset, part)
         optional[part] = named
+    optional["z_velocity"] = _upward_velocity(table, dataset, tracers[0], where)
     fluxes = _total_fluxes(table, dataset, (*tracers, *withheld), where)
     return Roles(
         x_velocity, y_velocity, tuple(tracers), tuple(withheld), **optional, total_fluxes=fluxes
@@ -229,6 +252,20 @@ def _total_fluxes(
         if along_x and along_y:
             found[tracer] = (along_x, along_y)
     return found
+
+
+def _upward_velocity(
+    table: EnsembleTable, dataset: xr.Dataset, tracer: str, where: object
+) -> str | None:
+    """Upward velocity the study names, else one with its standard name at known points."""
+    named = table.variables.z_velocity
+    if named is not None:
+        return require_variable(dataset, named, "[ensemble.variables] z_velocity", where)
+    for name in _fields(dataset):
+        placed = "z_velocity" in table.grid.faces or dataset[name].dims == dataset[tracer].dims
+        if placed and dataset[name].attrs.get("standard_name") == UPWARD_STANDARD_NAME:
+            return name
+    return None
 
 
 def _known_scalar(dataset: xr.Dataset, part: str) -> str | None:

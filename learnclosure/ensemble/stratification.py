@@ -2,77 +2,61 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
-
-import gsw
 import numpy as np
-import numpy.typing as npt
 
 from learnclosure.ensemble.grid import Grid
 from learnclosure.ensemble.roles import Roles
 from learnclosure.ensemble.rotation import EARTH_ROTATION
+from learnclosure.ensemble.seawater import (
+    EquationOfState,
+    LinearSeawater,
+    TemperatureKind,
+    Teos10Seawater,
+    pressure_at_depth,
+)
 from learnclosure.errors import RoleError
 from learnclosure.study import EnsembleTable, Seawater
 
-FloatArray = npt.NDArray[np.float64]
-BuoyancyRule = Callable[[FloatArray, FloatArray | None], FloatArray]
-
-GRAVITY = 9.81
-REFERENCE_DENSITY = 1025.0
-FREEZING_POINT_OF_WATER = 273.15
-SALINITY_OF_REFERENCE = 35.0
-KINDS = {
+KINDS: dict[str, TemperatureKind] = {
     "sea_water_conservative_temperature": "conservative",
     "sea_water_potential_temperature": "potential",
     "sea_water_temperature": "in-situ",
 }
 
 
-def _linear(seawater: Seawater, where: str) -> BuoyancyRule:
-    expansion = seawater.thermal_expansion
-    if expansion is None:
+def _linear(seawater: Seawater, where: str) -> LinearSeawater:
+    if seawater.thermal_expansion is None:
         raise RoleError(
             "buoyancy from temperature needs the thermal expansion coefficient",
             where=where,
             remedy="set 'thermal_expansion' in K-1 under [ensemble.seawater]",
         )
-    contraction = seawater.haline_contraction
-
-    def rule(temperature: FloatArray, salinity: FloatArray | None) -> FloatArray:
-        buoyancy = GRAVITY * expansion * (temperature - FREEZING_POINT_OF_WATER)
-        if salinity is None or contraction == 0.0:
-            return buoyancy
-        return buoyancy - GRAVITY * contraction * (salinity - SALINITY_OF_REFERENCE)
-
-    return rule
+    return LinearSeawater(seawater.thermal_expansion, seawater.haline_contraction)
 
 
-def _teos10(kind: str, grid: Grid) -> BuoyancyRule:
+def _teos10(kind: TemperatureKind, grid: Grid) -> Teos10Seawater:
     middle = np.cumsum(grid.layer_thickness, axis=0) - 0.5 * grid.layer_thickness
     sine = np.clip(0.5 * grid.coriolis_parameter / EARTH_ROTATION, -1.0, 1.0)
-    pressure = gsw.p_from_z(-middle, np.degrees(np.arcsin(sine)))
-
-    def rule(temperature: FloatArray, salinity: FloatArray | None) -> FloatArray:
-        celsius = temperature - FREEZING_POINT_OF_WATER
-        if kind == "in-situ":
-            celsius = gsw.CT_from_t(salinity, celsius, pressure)
-        elif kind == "potential":
-            celsius = gsw.CT_from_pt(salinity, celsius)
-        anomaly = gsw.sigma0(salinity, celsius) + 1000.0 - REFERENCE_DENSITY
-        return np.asarray(-GRAVITY * anomaly / REFERENCE_DENSITY)
-
-    return rule
+    return Teos10Seawater(kind, pressure_at_depth(middle, np.degrees(np.arcsin(sine))))
 
 
-def _temperature_kind(seawater: Seawater, standard_name: str, where: str) -> str:
+def _temperature_kind(
+    seawater: Seawater, standard_name: str, where: str, assumptions: list[str]
+) -> TemperatureKind:
     """Return the kind of temperature the study names, else the one CF attributes tell."""
-    kind = seawater.temperature_kind or KINDS.get(standard_name)
+    known = KINDS.get(standard_name)
+    kind = seawater.temperature_kind or known
     if kind is None:
         raise RoleError(
             "the kind of temperature is unknown",
             where=where,
             expected="conservative, potential or in-situ",
             remedy="set 'temperature_kind' under [ensemble.seawater]",
+        )
+    if known not in (None, kind):
+        assumptions.append(
+            f"the temperature is {kind} as the study says, although the files' standard_name "
+            f"'{standard_name}' makes it {known}"
         )
     return kind
 
@@ -83,7 +67,7 @@ def buoyancy_rule(
     grid: Grid,
     temperature_name: str,
     assumptions: list[str],
-) -> BuoyancyRule | None:
+) -> EquationOfState | None:
     """Choose how buoyancy follows from temperature and salinity.
 
     Parameters
@@ -98,7 +82,7 @@ def buoyancy_rule(
 
     Returns
     -------
-    callable or None
+    EquationOfState or None
         Takes temperature in K and absolute salinity in g kg-1 and returns buoyancy in
         m s-2; None if no temperature is named or buoyancy itself is given.
 
@@ -137,7 +121,7 @@ def buoyancy_rule(
             where=where,
             remedy="name 'salinity' under [ensemble.variables]",
         )
-    kind = _temperature_kind(seawater, temperature_name, where)
+    kind = _temperature_kind(seawater, temperature_name, where, assumptions)
     assumptions.append(
         f"buoyancy from potential density referenced to the surface (TEOS-10), {kind} temperature"
     )

@@ -116,7 +116,8 @@ def _attempts(spelling: str) -> tuple[str, ...]:
 
 def _parse(text: str, where: str) -> tuple[float, pint.Unit]:
     """Read a unit as a number times a unit pint knows; see :func:`parse_unit`."""
-    trap = TRAPS.get(text.strip().lower())
+    words = re.findall(r"[A-Za-z]+", text)
+    trap = next((TRAPS[word.lower()] for word in words if word.lower() in TRAPS), None)
     scaled = SCALE.match(text)
     scale, rest = (float(scaled[1]), text[scaled.end() :]) if scaled else (1.0, text)
     for attempt in () if trap else _attempts(_pint_spelling(rest)):

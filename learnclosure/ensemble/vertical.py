@@ -127,6 +127,10 @@ def read_thickness(reader: LayoutReader, mask: BoolArray, top_last: bool) -> Flo
         given = reader.standard("cell_thickness")
     if isinstance(given, str):
         values: FloatArray | None = reader.value(given, "m", "layer_thickness")
+        if reader.axes.time is not None and reader.axes.time in reader.dataset[given].dims:
+            # Members need not agree in a thickness that varies.
+            reader.used.remove(given)
+            reader.assumptions.append("the resting thickness is that of the first member")
     elif given is not None:
         values = np.asarray(given, dtype=np.float64)
     else:

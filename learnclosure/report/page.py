@@ -14,6 +14,7 @@ from jinja2 import Environment, PackageLoader, StrictUndefined
 from learnclosure import __version__
 from learnclosure.atomic import atomic_path
 from learnclosure.report import figures, tables
+from learnclosure.report.active import active_rows
 from learnclosure.report.cautions import CAUTIONS, NOT_FOR
 from learnclosure.report.ceiling_figure import ceiling_curves
 from learnclosure.report.summary import findings
@@ -103,6 +104,8 @@ def render_report(
         "flux_pictures": [figures.flux_maps(shown, data, here)],
         "diagnosis_rows": tables.diagnosis_rows(statistics),
         "ceiling_picture": ceiling_curves(shown, data),
+        "active_rows": active_rows(statistics),
+        "diagnosis_cautions": tables.diagnosis_cautions(statistics),
         "audit_rows": tables.audit_rows(evaluation),
         "half_width_note": _half_width_note(evaluation),
         "coverage_rows": tables.coverage_rows(evaluation),

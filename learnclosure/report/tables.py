@@ -183,3 +183,22 @@ def diagnosis_rows(statistics: Mapping[str, xr.Dataset]) -> list[list[str]]:
         ]
         for region, dataset in statistics.items()
     ]
+
+
+def diagnosis_cautions(statistics: Mapping[str, xr.Dataset]) -> list[str]:
+    """Say for each region where its diagnosis is weak.
+
+    Parameters
+    ----------
+    statistics : mapping of str to xarray.Dataset
+
+    Returns
+    -------
+    list of str
+    """
+    return [
+        f"{name}: {said}"
+        for name, data in statistics.items()
+        for said in str(data.attrs.get("cautions", "")).split("; ")
+        if said
+    ]

@@ -13,8 +13,9 @@ import numpy as np
 
 from learnclosure.atomic import atomic_folder
 from learnclosure.errors import InputError
-from learnclosure.simulate.dynamics import Channel, ridge_height
+from learnclosure.simulate.dynamics import Channel, ridge_height, uniform_gradients
 from learnclosure.simulate.files import (
+    ActiveLabel,
     Layout,
     MemberFile,
     TracerLabel,
@@ -46,6 +47,25 @@ def _silent(region: str, share: float, note: str) -> None:
     """Report nothing."""
 
 
+def _active_labels(regime: ChannelRegime) -> tuple[ActiveLabel, ...]:
+    slopes = uniform_gradients(regime)
+    return (
+        ActiveLabel(
+            "potential_vorticity",
+            "quasi-geostrophic potential vorticity without its uniform gradient",
+            "s-1",
+            slopes["potential_vorticity"],
+        ),
+        ActiveLabel(
+            "thickness",
+            "layer thickness at the time without its uniform gradient",
+            "m",
+            slopes["thickness"],
+            "cell_thickness",
+        ),
+    )
+
+
 def _layout(regime: ChannelRegime, times: Sequence[float], window: float | None) -> Layout:
     return Layout(
         title=f"two-layer quasi-geostrophic channel, invented region {regime.name}",
@@ -62,6 +82,7 @@ def _layout(regime: ChannelRegime, times: Sequence[float], window: float | None)
         times=np.array(times),
         tracers=tuple(TracerLabel(wave.name, wave.long_name, wave.role) for wave in CHANNEL_WAVES),
         window=window,
+        active=_active_labels(regime),
     )
 
 
@@ -113,18 +134,31 @@ def _run_to(channel: Channel, step: int, stopwatch: _Stopwatch) -> None:
 
 def _write_snapshot(channel: Channel, files: Sequence[MemberFile], time: int) -> None:
     u, v = channel.centre_velocities()
+    thickness = channel.layer_thicknesses()
     for member, file in enumerate(files):
         tracers = {
             wave.name: channel.tracers[member, :, index] for index, wave in enumerate(CHANNEL_WAVES)
         }
-        file.write(time, {"x_velocity": u[member], "y_velocity": v[member], **tracers})
+        fields = {
+            "x_velocity": u[member],
+            "y_velocity": v[member],
+            "potential_vorticity": channel.vorticity[member],
+            "thickness": thickness[member],
+        }
+        file.write(time, {**fields, **tracers})
 
 
 def _write_window(channel: Channel, files: Sequence[MemberFile], time: int) -> None:
     means = channel.window_means()
     u, v = channel.centre_velocities(means.corner)
+    thickness = channel.layer_thicknesses(means.corner)
     for member, file in enumerate(files):
-        fields = {"x_velocity": u[member], "y_velocity": v[member]}
+        fields = {
+            "x_velocity": u[member],
+            "y_velocity": v[member],
+            "potential_vorticity": means.vorticity[member],
+            "thickness": thickness[member],
+        }
         for index, wave in enumerate(CHANNEL_WAVES):
             fields[wave.name] = means.tracers[member, :, index]
             fields[flux_name(wave.name, "x")] = means.flux_x[member, :, index]
@@ -190,6 +224,7 @@ def simulate_channel(
         "regime": asdict(regime), "members": members, "snapshots": snapshots,
         "spacing_days": spacing_days, "spinup_days": spinup_days, "tracer_days": tracer_days,
         "fluxes": fluxes, "seed": seed, "targets": [asdict(wave) for wave in CHANNEL_WAVES],
+        "active": [label.role for label in _active_labels(regime)],
     }  # fmt: skip
     if is_complete(target, record, members):
         report(regime.name, 1.0, "kept what is there")

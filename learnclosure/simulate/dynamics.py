@@ -80,6 +80,28 @@ def jet_velocity(regime: ChannelRegime) -> Float64:
     return np.asarray(profile + regime.background_speed, dtype=np.float64)
 
 
+def uniform_gradients(regime: ChannelRegime) -> dict[str, Float64]:
+    """Gradients along y of the background flow, which periodic fields leave out.
+
+    Parameters
+    ----------
+    regime : ChannelRegime
+
+    Returns
+    -------
+    dict of str to ndarray, shape (layer,)
+        ``potential_vorticity`` in m-1 s-1 and ``thickness``, a pure number: the interface
+        slopes by ``f (U_1 - U_2) / g'``.
+    """
+    shear = float(jet_velocity(regime).mean())
+    upper, lower = regime.coupling
+    slope = regime.coriolis_parameter * shear / regime.reduced_gravity
+    return {
+        "potential_vorticity": np.array([regime.beta + upper * shear, regime.beta - lower * shear]),
+        "thickness": np.array([-slope, slope]),
+    }
+
+
 def _two_of(shape: tuple[int, ...]) -> tuple[Field, Field]:
     """Zeros for the increments of the last two steps."""
     return np.zeros(shape, np.float32), np.zeros(shape, np.float32)
@@ -165,9 +187,8 @@ class Channel:
         step = DAY / regime.steps_per_day
         jet = jet_velocity(regime)
         self._background: Field = np.array([jet.mean(), 0.0], np.float32)
-        shear = float(jet.mean())
         upper, lower = regime.coupling
-        gradients = (regime.beta + upper * shear, regime.beta - lower * shear)
+        gradients = uniform_gradients(regime)["potential_vorticity"]
         relaxed = step / (regime.relaxation_days * DAY)
         drag = step / (regime.drag_days * DAY)
         # South-face Courant numbers come divided by 60, two of them make a mean: factor 30.
@@ -265,6 +286,7 @@ class Channel:
         for _ in range(steps):
             if self._window is not None:
                 window.corner += self._corner
+                window.vorticity += self.vorticity
                 window.steps += 1
             age = min(self.steps, 2)
             tracer_age = min(self.steps - self._tracer_start, 2)
@@ -316,6 +338,30 @@ class Channel:
         u = 0.5 * (west + np.roll(west, -1, axis=-1))
         v = 0.5 * (south + np.roll(south, -1, axis=-2))
         return u, v
+
+    def layer_thicknesses(self, corner: Float64 | None = None) -> Float64:
+        """Thickness of both layers at cell centres without its uniform gradient.
+
+        The interface lies ``f (psi_1 - psi_2) / g'`` below its resting depth; the ridge
+        stands in the lower layer.
+
+        Parameters
+        ----------
+        corner : ndarray, optional, shape (member, 2, y, x), m2 s-1
+            As for `face_velocities`.
+
+        Returns
+        -------
+        ndarray, shape (member, 2, y, x), m
+        """
+        regime = self.regime
+        chosen = self._corner.astype(np.float64) if corner is None else corner
+        apart = chosen[:, 0] - chosen[:, 1]
+        apart = 0.5 * (apart + np.roll(apart, 1, axis=-1))
+        apart = 0.5 * (apart + np.roll(apart, 1, axis=-2))
+        deeper = regime.coriolis_parameter / regime.reduced_gravity * apart
+        upper, lower = regime.thicknesses
+        return np.stack([upper + deeper, lower - deeper - ridge_height(regime)], axis=1)
 
     def courant_number(self) -> float:
         """Largest ``(|u| + |v|) dt / dx`` of all members; not a number once one blew up."""

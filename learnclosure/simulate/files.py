@@ -42,6 +42,39 @@ class TracerLabel:
 
 
 @dataclass(frozen=True)
+class ActiveLabel:
+    """How one field that acts on the flow is named in the files.
+
+    Attributes
+    ----------
+    role : {"potential_vorticity", "thickness"}
+        Its name as well.
+    long_name, units : str
+    left_out_gradient : ndarray, shape (layer,)
+        Uniform gradient along y that periodic values leave out, units per metre.
+    standard_name : str
+        Empty where CF has none.
+    """
+
+    role: str
+    long_name: str
+    units: str
+    left_out_gradient: Float64
+    standard_name: str = ""
+
+    def attributes(self) -> dict[str, Any]:
+        """Return what the variable carries."""
+        named = {"standard_name": self.standard_name} if self.standard_name else {}
+        return {
+            **named,
+            "long_name": self.long_name,
+            "units": self.units,
+            "active_role": self.role,
+            "left_out_gradient_y": self.left_out_gradient,
+        }
+
+
+@dataclass(frozen=True)
 class Layout:
     """What all members of one ensemble share.
 
@@ -68,6 +101,8 @@ class Layout:
     window : float, optional, days
         Where fields are means over windows that end at the times: how long these are.
         Total tracer fluxes through the faces are then written too.
+    active : tuple of ActiveLabel
+        Further fields, written in single precision.
     """
 
     title: str
@@ -84,6 +119,7 @@ class Layout:
     tracers: tuple[TracerLabel, ...]
     precision: str = "f4"
     window: float | None = None
+    active: tuple[ActiveLabel, ...] = ()
 
 
 def flux_name(tracer: str, axis: str) -> str:
@@ -146,6 +182,8 @@ class MemberFile:
                     f"{face} face of the cell",
                     units=units, total_flux_of=label.name, face=face, **common,
                 )  # fmt: skip
+        for active in layout.active:
+            self._create(active.role, dimensions, "f4", **common, **active.attributes())
 
     def __enter__(self) -> MemberFile:
         return self
@@ -164,11 +202,11 @@ class MemberFile:
         dimensions: tuple[str, ...],
         kind: str,
         values: Any = None,
-        **attributes: str,
+        **attributes: Any,
     ) -> None:
         variable = self._file.create_variable(name, dimensions, kind)
-        for key, text in attributes.items():
-            variable.attrs[key] = text
+        for key, value in attributes.items():
+            variable.attrs[key] = value
         if values is not None:
             variable[...] = values
 
@@ -235,14 +273,14 @@ class MemberFile:
         attributes["planetary_beta"] = np.float64(layout.planetary_beta)
 
     def write(self, time: int | slice, fields: Mapping[str, npt.NDArray[Any]]) -> None:
-        """Write velocities and tracers.
+        """Write velocities, tracers and further fields.
 
         Parameters
         ----------
         time : int or slice
             Which snapshots.
         fields : mapping of str to ndarray, shape ([time,] layer, y, x)
-            By the names of the velocities and tracers.
+            By their names.
         """
         for name, values in fields.items():
             variable = self._file.variables[name]

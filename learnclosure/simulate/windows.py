@@ -20,6 +20,8 @@ class WindowMeans:
     ----------
     corner : ndarray, shape (member, 2, y, x), m2 s-1
         Streamfunction at north-east corners.
+    vorticity : ndarray, shape (member, 2, y, x), s-1
+        Potential vorticity without its uniform gradient.
     tracers : ndarray, shape (member, 2, tracer, y, x)
     flux_x, flux_y : ndarray, shape (member, 2, tracer, y, x), m s-1
         Total tracer fluxes through the east and the north face of each cell, as the scheme
@@ -27,6 +29,7 @@ class WindowMeans:
     """
 
     corner: Float64
+    vorticity: Float64
     tracers: Float64
     flux_x: Float64
     flux_y: Float64
@@ -47,6 +50,7 @@ class WindowSums:
         columns = stride - 2 * HALO
         self.steps = 0
         self.corner: Float64 = np.zeros((members, layers, inner, columns))
+        self.vorticity: Float64 = np.zeros_like(self.corner)
         self.content: Field = np.zeros((members, layers, tracers, inner, stride), np.float32)
         self.flux_x: Field = np.zeros_like(self.content)
         self.flux_y: Field = np.zeros((members, layers, tracers, inner + 1, stride), np.float32)
@@ -68,6 +72,7 @@ class WindowSums:
         flux = cell_over_step / self.steps
         return WindowMeans(
             corner=self.corner / self.steps,
+            vorticity=self.vorticity / self.steps,
             tracers=self.content[..., cells].astype(np.float64) / self.steps,
             flux_x=self.flux_x[..., east].astype(np.float64) * flux,
             flux_y=self.flux_y[..., 1:, cells].astype(np.float64) * flux,
