@@ -244,6 +244,6 @@ if __name__ == "__main__":
         for name in sys.argv[1:]:
             from_files(Path(name))
         with tempfile.TemporaryDirectory() as folder:
-            write_many(Path(folder), 12, 96)
+            write_many(Path(folder), 12, 64)
             from_files(Path(folder))
         memory()

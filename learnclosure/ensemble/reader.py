@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import copy
 from collections.abc import Iterator
 from contextlib import ExitStack
 from dataclasses import replace
@@ -241,7 +240,8 @@ class Ensemble:
             return self
         if self._part is not None and self._part[0] == rows:
             return self._part[1]
-        part = copy.copy(self)
+        part = object.__new__(type(self))
+        part.__dict__ |= self.__dict__
         band = band_of(rows, count, periodic=self._cells.periodic_y)
         part._band, part._block, part._block_start, part._part = band, {}, -1, None
         part.__dict__.pop("_block_times", None)
@@ -488,10 +488,10 @@ class Ensemble:
 
     def _as_stored(self, member: Member, name: str, time: int) -> npt.NDArray[Any]:
         """Read one field of one member in the precision of the files."""
-        start = time - time % self._block_times
-        if start != self._block_start:
+        if not 0 <= time - self._block_start < self._block_times or self._block_start < 0:
             self._block.clear()
-            self._block_start = start
+            self._block_start = time
+        start = self._block_start
         key = (member.path, name)
         if key not in self._block:
             self._block[key] = self._load(member, name, start)
@@ -555,7 +555,9 @@ class Ensemble:
         one *= self._cells.rows / variable.sizes[self.axes.y]
         if first.dimension is None:
             one *= len(self.members)
-        return int(max(1, min(count, BLOCK_BYTES // max(one, 1))))
+        fitting = int(max(1, min(count, BLOCK_BYTES // max(one, 1))))
+        # Bands are left and come back to after a few times; whole blocks fit into those.
+        return fitting if self._band is None else 2 ** (min(fitting, 8).bit_length() - 1)
 
 
 def open_ensemble(table: EnsembleTable, folder: Path | str = ".") -> Ensemble:
