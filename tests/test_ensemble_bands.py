@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+from pathlib import Path
+
 import numpy as np
 import pytest
 
 from ensemble_files import member_dataset
 from learnclosure.ensemble.reader import open_ensemble
-from learnclosure.study import EnsembleTable
+from learnclosure.study import EnsembleTable, read_study
 
 DIMS = ("time", "layer", "y", "x")
 
@@ -54,3 +56,35 @@ def test_numbers_keep_their_precision_until_they_must_change(tmp_path):
         assert kinds["dye_b"] == np.float32
         assert kinds["dye_a"] == kinds["y_velocity"] == np.float64
         assert all(values.dtype == np.float64 for values in ensemble.fields(0).values())
+
+
+def test_rows_of_files_of_another_model_with_buoyancy():
+    # Velocities on faces, the top layer last, buoyancy by an equation of state, land.
+    study = read_study(Path(__file__).parent.parent / "experiments/foreign_fixture/study.toml")
+    with open_ensemble(study.ensembles[0], study.folder) as ensemble:
+        assert ensemble.has_buoyancy
+        whole, count = ensemble.fields(1), ensemble.grid.shape[1]
+        middle = count // 2
+        sea = ensemble.grid.geometry.mask
+        for rows in (slice(0, middle), slice(middle, count)):
+            part = ensemble.fields_of(1, slice(None), rows)
+            assert part.keys() == whole.keys()
+            for name, values in part.items():
+                wet = np.where(sea[:, rows], values, 0.0)
+                np.testing.assert_array_equal(wet, whole[name][:, :, rows])
+
+
+def test_rows_of_layers_of_varying_thickness(tmp_path):
+    for number in range(2):
+        dataset = member_dataset(number, rows=12, columns=6)
+        random = np.random.default_rng(number)
+        thickness = np.array([1000.0, 3000.0])[:, None, None] + random.normal(size=(3, 2, 12, 6))
+        dataset["thickness"] = (DIMS, thickness.astype(np.float32), {"units": "m"})
+        dataset.to_netcdf(tmp_path / f"member_{number}.nc", engine="h5netcdf")
+    table = EnsembleTable(name="north", files="*.nc", variables={"thickness": "thickness"})
+    with open_ensemble(table, tmp_path) as ensemble:
+        whole = ensemble.fields(2)
+        assert "interface_height" in whole
+        for rows in (slice(0, 4), slice(4, 12)):
+            for name, values in ensemble.fields_of(2, slice(None), rows).items():
+                np.testing.assert_array_equal(values, whole[name][:, :, rows])
