@@ -61,6 +61,7 @@ class InMemory:
 
     name, split, units, has_buoyancy = "memory", "train", {}, False
     tracers, withheld_tracers, assumptions = TRACERS, (), ()
+    active, left_out_gradients = (), {}
     times = np.arange(8.0)
 
     def __init__(self, fields: dict[str, np.ndarray]) -> None:

@@ -29,6 +29,11 @@ def named_quantity(name: str) -> Quantity:
     return {**MEAN_STATE, **STATISTICS, **DEPTH_STATISTICS}[name]
 
 
+def times_units(units: str, factor: str) -> str:
+    """Units of a tracer, which may be a pure number, times others."""
+    return factor if units == "1" else f"{units} {factor}"
+
+
 class StatisticsBuilder:
     """Collects variables with their attributes and builds the dataset.
 
@@ -124,8 +129,7 @@ class StatisticsBuilder:
         """
         dims = ("half", *LAYER_FIELD) if halves else LAYER_FIELD
         suffix, about = ("_halves", "of each half of the members, ") if halves else ("", "")
-        flux_units = "m s-1" if units == "1" else f"{units} m s-1"
-        slope_units = "m-1" if units == "1" else f"{units} m-1"
+        flux_units, slope_units = times_units(units, "m s-1"), times_units(units, "m-1")
         for number, axis in enumerate("xy"):
             part = (slice(None), number) if halves else (number,)
             self.add(
@@ -142,6 +146,11 @@ class StatisticsBuilder:
         return xr.Dataset(self.variables, self.coordinates, dict(attributes))
 
 
+def cautions_of(statistics: xr.Dataset) -> list[str]:
+    """Return what a diagnosis says of its own weaknesses, one sentence each."""
+    return [said for said in str(statistics.attrs.get("cautions", "")).split("; ") if said]
+
+
 def read_cautions(path: Path) -> list[str]:
     """Read what a diagnosis says of its own weaknesses.
 
@@ -156,7 +165,7 @@ def read_cautions(path: Path) -> list[str]:
         One sentence each.
     """
     with xr.open_dataset(path, engine="h5netcdf") as statistics:
-        return [said for said in str(statistics.attrs.get("cautions", "")).split("; ") if said]
+        return cautions_of(statistics)
 
 
 def write_statistics(statistics: xr.Dataset, path: Path) -> None:

@@ -31,7 +31,7 @@ from learnclosure.diagnosis.reliability import (
     subset_noise,
 )
 from learnclosure.diagnosis.sampling import spearman_brown, weighted_correlation
-from learnclosure.diagnosis.tensor import least_squares_tensor
+from learnclosure.diagnosis.tensor import COMPONENTS, least_squares_tensor
 
 FloatArray = npt.NDArray[np.float64]
 BoolArray = npt.NDArray[np.bool_]
@@ -42,9 +42,6 @@ LEAST_MEMBERS = 4
 MOST_TIMES_MORE = 4
 """How many times more members or snapshots than there are the curves are drawn out to."""
 REPLICATES = 200
-COMPONENTS = tuple(
-    (a, b, f"{row}{column}") for a, row in enumerate("xy") for b, column in enumerate("xy")
-)
 
 
 @dataclass(frozen=True)

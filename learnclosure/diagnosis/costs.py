@@ -85,7 +85,7 @@ def inversions_needed(members: int, times: int, tracers: int, withheld: int, dra
     if members >= LEAST_MEMBERS_FOR_JACKKNIFE:
         count += members
     if withheld:
-        count += len(SMOOTHING_FACTORS)
+        count += sum(factor != 1.0 for factor in SMOOTHING_FACTORS)
     elif tracers > 2:
         count += 2 * tracers
     if members >= LEAST_MEMBERS_FOR_HALVES:

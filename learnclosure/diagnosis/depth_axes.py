@@ -9,7 +9,7 @@ import numpy as np
 import numpy.typing as npt
 import xarray as xr
 
-from learnclosure.diagnosis.artefact import StatisticsBuilder, named_quantity
+from learnclosure.diagnosis.artefact import StatisticsBuilder, named_quantity, times_units
 from learnclosure.diagnosis.coarse import Coarsening
 from learnclosure.diagnosis.isoneutral import (
     Form,
@@ -163,11 +163,11 @@ def add_depth_axes(
         builder.add(
             f"{name}_eddy_flux_z", found.upward_flux[name], ("layer", "y", "x"),
             f"upward eddy flux of {name}, time mean of the ensemble covariance of upward "
-            f"velocity and {name}", "m s-1" if units == "1" else f"{units} m s-1",
+            f"velocity and {name}", times_units(units, "m s-1"),
         )  # fmt: skip
         builder.add(
             f"{name}_gradient_z", found.upward_gradient[name], ("layer", "y", "x"),
-            f"upward gradient of mean {name}", "m-1" if units == "1" else f"{units} m-1",
+            f"upward gradient of mean {name}", times_units(units, "m-1"),
         )  # fmt: skip
 
 

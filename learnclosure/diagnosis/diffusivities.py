@@ -24,6 +24,7 @@ from scipy.sparse import coo_matrix, csc_matrix, csr_matrix, diags_array
 from learnclosure.diagnosis.knots import Knots, place_knots
 from learnclosure.diagnosis.nonnegative import minimise_nonnegative
 from learnclosure.diagnosis.skill import divergence_skill
+from learnclosure.diagnosis.systems import sea_faces
 from learnclosure.ensemble.grid import Geometry, divergence
 
 FloatArray = npt.NDArray[np.float64]
@@ -54,22 +55,14 @@ def divergence_operator(geometry: Geometry, layer: int) -> tuple[csr_matrix, csr
     along_x, along_y : scipy.sparse.csr_matrix, shape (y x, y x), m-1
         Their products with the components sum to what ``divergence`` gives.
     """
-    mask = geometry.mask[layer]
-    index = np.arange(mask.size).reshape(mask.shape)
+    size = geometry.mask[layer].size
     parts = []
-    for axis, side, periodic in (
-        (1, geometry.dy, geometry.periodic_x),
-        (0, geometry.dx, geometry.periodic_y),
-    ):
-        joined = mask & np.roll(mask, -1, axis)
-        if not periodic:
-            joined[(slice(None), -1) if axis else (-1,)] = False
-        here, there = index[joined], np.roll(index, -1, axis)[joined]
-        half = 0.25 * (side + np.roll(side, -1, axis))[joined]
+    for _axis, here, there, _distance, side in sea_faces(geometry, layer):
+        half = 0.5 * side
         rows = np.concatenate([here, here, there, there])
         columns = np.concatenate([here, there, here, there])
         values = np.concatenate([half, half, -half, -half])
-        matrix = coo_matrix((values, (rows, columns)), shape=(mask.size, mask.size))
+        matrix = coo_matrix((values, (rows, columns)), shape=(size, size))
         parts.append(csr_matrix(diags_array(1.0 / geometry.area.ravel()) @ matrix))
     return parts[0], parts[1]
 

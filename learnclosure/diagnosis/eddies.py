@@ -19,13 +19,13 @@ from learnclosure.diagnosis.moment_layout import (
 from learnclosure.diagnosis.moment_sums import Finisher, MomentState
 from learnclosure.diagnosis.moment_types import (
     Definition,
-    EnsembleSource,
     Fields,
     FloatArray,
     Moments,
     PartialSource,
 )
 from learnclosure.diagnosis.subgrid import block_fields
+from learnclosure.ensemble.protocol import EnsembleSource
 from learnclosure.errors import DiagnosisError
 
 TIME_BLOCKS = 4

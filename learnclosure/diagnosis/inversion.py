@@ -26,7 +26,9 @@ from learnclosure.diagnosis.systems import (
     smoothness_operator,
 )
 from learnclosure.diagnosis.tensor import (
+    LARGEST_CONDITION_NUMBER,
     NormalEquations,
+    condition_number,
     scalar_diffusivity,
     with_floor,
 )
@@ -166,7 +168,8 @@ class _LayerFit:
         self._kind = DirectSystem if direct else IterativeSystem
 
     def _system(self, M: FloatArray) -> LayerSystem:
-        return self._kind(M, self._area, self._smooth)
+        undetermined = condition_number(M) > LARGEST_CONDITION_NUMBER
+        return self._kind(M, self._area, self._smooth, undetermined)
 
     def free(self) -> FloatArray:
         """Fit without a floor, shape (cell, 2, 2)."""

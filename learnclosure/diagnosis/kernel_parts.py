@@ -10,20 +10,10 @@ import numpy.typing as npt
 from numba import types
 from numba.extending import intrinsic
 
+from learnclosure.compiled import compiled
+
 FloatArray = npt.NDArray[np.float64]
 IndexArray = npt.NDArray[np.int64]
-
-OPTIONS: dict[str, Any] = {"error_model": "numpy", "nogil": True}
-"""The compiler may neither reorder nor fuse operations, so that rounding never changes."""
-
-
-def compiled(function: Any) -> Any:
-    """Compile a kernel, keeping the machine code on disk wherever a cache can be written."""
-    try:
-        return numba.njit(cache=True, **OPTIONS)(function)
-    except RuntimeError:
-        # Raised where neither the package nor the user's cache folder can be written to.
-        return numba.njit(**OPTIONS)(function)
 
 
 class Plan(NamedTuple):
@@ -107,7 +97,7 @@ _single = _pointer_to(types.float32)
 _double = _pointer_to(types.float64)
 
 
-@compiled
+@compiled()
 def load(source, tile, target):  # type: ignore[no-untyped-def]
     """Copy a tile of all fields and members, shape (field, member, row, column)."""
     fields, members, rows, columns = target.shape
@@ -127,7 +117,7 @@ def load(source, tile, target):  # type: ignore[no-untyped-def]
                         target[field, member, row, column] = wide[column]
 
 
-@compiled
+@compiled()
 def fold(values, tile, factor, target):  # type: ignore[no-untyped-def]
     """Sum tiles, shape (any, point), over their blocks; ``values`` is used up on the way."""
     columns, whole = tile.columns, tile.columns // factor
@@ -152,7 +142,7 @@ def fold(values, tile, factor, target):  # type: ignore[no-untyped-def]
             target[number, whole] = total
 
 
-@compiled
+@compiled()
 def scale(values, area, target):  # type: ignore[no-untyped-def]
     """Multiply by area; what stands on land does not matter."""
     for number in range(len(target)):
@@ -161,7 +151,7 @@ def scale(values, area, target):  # type: ignore[no-untyped-def]
             target[number, point] = value if area[point] > 0.0 else 0.0
 
 
-@compiled
+@compiled()
 def multiply(plan, area, apart, target):  # type: ignore[no-untyped-def]
     """Products of two fields each, times area."""
     for pair in range(len(target)):

@@ -17,9 +17,9 @@ from __future__ import annotations
 
 import numpy as np
 
+from learnclosure.compiled import compiled
 from learnclosure.diagnosis.kernel_parts import (
     Tile,
-    compiled,
     fold,
     load,
     multiply,
@@ -32,7 +32,7 @@ WEIGHT, PAIR_WEIGHT, FIRST = 0, 1, 2
 """Places of the weights of means and of products, and of the first mean."""
 
 
-@compiled
+@compiled()
 def _depart(values, area, mean):  # type: ignore[no-untyped-def]
     """Turn values into departures from their mean, zero on land; tell whether all is finite."""
     fields, members, points = values.shape
@@ -56,7 +56,7 @@ def _depart(values, area, mean):  # type: ignore[no-untyped-def]
     return True
 
 
-@compiled
+@compiled()
 def _group_sums(plan, area, values, group, lead, product, apart):  # type: ignore[no-untyped-def]
     """Sum products of departures, times area, and departures over one group."""
     fields, members, points = values.shape
@@ -82,7 +82,7 @@ def _group_sums(plan, area, values, group, lead, product, apart):  # type: ignor
                     product[pair, point] += lead[number, point] * values[field, member, point]
 
 
-@compiled
+@compiled()
 def _fold_groups(tile, plan, area, values, whole, halves, groups, left, half_apart):  # type: ignore[no-untyped-def]
     """Fold sums of departures and of their products of each group, and add them up.
 
@@ -117,7 +117,7 @@ def _fold_groups(tile, plan, area, values, whole, halves, groups, left, half_apa
         fold(scaled, tile, plan.factor, groups[group, 1 : 1 + plan.kept_fields])
 
 
-@compiled
+@compiled()
 def _finish_groups(plan, members, fields, whole, groups, left):  # type: ignore[no-untyped-def]
     """Turn sums over groups to means over each and to covariances without each."""
     for group in range(len(plan.sizes)):
@@ -140,7 +140,7 @@ def _finish_groups(plan, members, fields, whole, groups, left):  # type: ignore[
                 groups[group, place, block] = own / size
 
 
-@compiled
+@compiled()
 def _even_tile(tile, plan, area, values, mean, whole, halves, groups, left):  # type: ignore[no-untyped-def]
     """Find the block sums of one tile of departures in which every member counts one."""
     fields, members, points = values.shape
@@ -176,7 +176,7 @@ def _even_tile(tile, plan, area, values, mean, whole, halves, groups, left):  # 
             whole[FIRST + fields + pair, block] /= members - 1
 
 
-@compiled
+@compiled()
 def _add(values, layer, row, block, target):  # type: ignore[no-untyped-def]
     """Add the block sums of a tile to the running sums."""
     for number in range(values.shape[0]):
@@ -184,7 +184,7 @@ def _add(values, layer, row, block, target):  # type: ignore[no-untyped-def]
             target[number, layer, row, block + place] += values[number, place]
 
 
-@compiled
+@compiled()
 def add_moments(source, plan, area, first_block_row, whole, halves, groups, left):  # type: ignore[no-untyped-def]
     """Add the moments over members of one time, or of some of its rows, to running sums.
 

@@ -4,10 +4,11 @@ from __future__ import annotations
 
 import numpy as np
 
-from learnclosure.diagnosis.kernel_parts import compiled, fold, scale
+from learnclosure.compiled import compiled
+from learnclosure.diagnosis.kernel_parts import fold, scale
 
 
-@compiled
+@compiled()
 def _weigh(plan, area, values, weight):  # type: ignore[no-untyped-def]
     """Give members their weights, none where a value is missing; count those in the sea."""
     fields, members, points = values.shape
@@ -31,7 +32,7 @@ def _weigh(plan, area, values, weight):  # type: ignore[no-untyped-def]
     return missing
 
 
-@compiled
+@compiled()
 def _average(values, weight, total, mean):  # type: ignore[no-untyped-def]
     """Weighted means over members."""
     fields, members, points = values.shape
@@ -48,7 +49,7 @@ def _average(values, weight, total, mean):  # type: ignore[no-untyped-def]
             average[point] /= total[point] if total[point] > 0.0 else 1.0
 
 
-@compiled
+@compiled()
 def _group_sums(plan, values, weight, mean, product, apart, total):  # type: ignore[no-untyped-def]
     """Sum weights, departures and their products over each group."""
     fields, members, points = values.shape
@@ -71,7 +72,7 @@ def _group_sums(plan, values, weight, mean, product, apart, total):  # type: ign
                 summed[point] += own[point] * first[point] * second[point]
 
 
-@compiled
+@compiled()
 def _sum_part(mean, apart, total, members, values):  # type: ignore[no-untyped-def]
     """Average part of the members, whose departures are summed in ``apart``."""
     for field in range(len(values)):
@@ -80,7 +81,7 @@ def _sum_part(mean, apart, total, members, values):  # type: ignore[no-untyped-d
             values[field, point] = summed / members
 
 
-@compiled
+@compiled()
 def _estimate(tile, plan, area, mean, product, apart, total, present, members, fields, target):  # type: ignore[no-untyped-def]
     """Fold weights, means and unbiased covariances of part of the members.
 
@@ -110,7 +111,7 @@ def _estimate(tile, plan, area, mean, product, apart, total, present, members, f
     fold(values, tile, plan.factor, target[first + fields :])
 
 
-@compiled
+@compiled()
 def _group_estimate(tile, plan, area, mean, product, apart, total, size, target):  # type: ignore[no-untyped-def]
     """Fold the weight, means and mean products of one group."""
     points = len(area)
@@ -125,7 +126,7 @@ def _group_estimate(tile, plan, area, mean, product, apart, total, size, target)
     fold(values, tile, plan.factor, target)
 
 
-@compiled
+@compiled()
 def _over_groups(values, first, step, target):  # type: ignore[no-untyped-def]
     """Sum every ``step``-th group from the first one."""
     target[:] = 0.0
@@ -135,7 +136,7 @@ def _over_groups(values, first, step, target):  # type: ignore[no-untyped-def]
                 target[number, point] += values[group, number, point]
 
 
-@compiled
+@compiled()
 def add_weighted_tile(tile, plan, area, values, mean, whole, halves, groups, left):  # type: ignore[no-untyped-def]
     """Find the block sums of one tile with a weight for each member and place.
 

@@ -11,7 +11,8 @@ import numpy as np
 import numpy.typing as npt
 
 from learnclosure.diagnosis.kernel_parts import Plan, Rows
-from learnclosure.diagnosis.moment_types import EnsembleSource, IndexArray
+from learnclosure.diagnosis.moment_types import IndexArray
+from learnclosure.ensemble.protocol import EnsembleSource
 from learnclosure.ensemble.sources import LEAST_MEMBERS_FOR_HALVES
 
 HORIZONTAL = ("x_velocity", "y_velocity")
@@ -154,7 +155,7 @@ def layouts_of(source: EnsembleSource, names: Iterable[str]) -> dict[str, Layout
     """
     known = tuple(names)
     weighted = bool(getattr(source, "weighted", False))
-    active = tuple(name for name in getattr(source, "active", ()) if name in known)
+    active = tuple(name for name in source.active if name in known)
     if weighted:
         active = tuple(name for name in active if name != THICKNESS)
     scalars = tuple(dict.fromkeys((*source.tracers, *source.withheld_tracers, *active)))

@@ -10,11 +10,11 @@ from learnclosure.diagnosis.execution import Execution, merged_chunks
 from learnclosure.diagnosis.moment_sums import MomentState
 from learnclosure.diagnosis.moment_types import (
     Definition,
-    EnsembleSource,
     GroupMoments,
     Moments,
     PartialSource,
 )
+from learnclosure.ensemble.protocol import EnsembleSource
 from learnclosure.errors import DiagnosisError
 
 __all__ = [

@@ -17,14 +17,11 @@ from learnclosure.diagnosis.budget import (
 from learnclosure.diagnosis.estimate import Estimator, Form, GroupEstimate, WithheldSkill
 from learnclosure.diagnosis.moments import EnsembleSource, GroupMoments
 from learnclosure.diagnosis.relaxation import without_relaxation
+from learnclosure.diagnosis.tensor import COMPONENTS
 from learnclosure.errors import DiagnosisError
 
 FloatArray = npt.NDArray[np.float64]
 BoolArray = npt.NDArray[np.bool_]
-
-PAIRS = tuple(
-    (a, b, f"{row}{column}") for a, row in enumerate("xy") for b, column in enumerate("xy")
-)
 
 HIGH_CONDITION = 5.0
 HIGH_LEVERAGE = 1.0
@@ -34,7 +31,7 @@ NOTEWORTHY_SHARE = 0.05
 
 def tensor_components(tensor: FloatArray) -> dict[str, FloatArray]:
     """Split tensors, shape (..., 2, 2), into components by name (xx, xy, yx, yy)."""
-    return {name: tensor[..., a, b] for a, b, name in PAIRS}
+    return {name: tensor[..., a, b] for a, b, name in COMPONENTS}
 
 
 def add_quality(
@@ -80,7 +77,7 @@ def add_quality(
         )  # fmt: skip
     if not halves:
         return
-    for a, b, name in PAIRS:
+    for a, b, name in COMPONENTS:
         builder.add_named(
             f"transport_tensor_{name}",
             np.where(
@@ -92,7 +89,7 @@ def add_quality(
             "of each half of the members,",
         )
     reliability = estimator.component_reliability(halves, valid)
-    for a, b, name in PAIRS:
+    for a, b, name in COMPONENTS:
         builder.add(
             f"reliability_transport_tensor_{name}", reliability[a, b], ("layer",),
             f"split-half reliability of the {name} component of the transport tensor", "1",
@@ -140,7 +137,7 @@ def add_budget(
     builder.coordinates["error_source_name"] = xr.Variable(
         ("error_source",), np.array(list(known), dtype=object), {"long_name": "source of error"}
     )
-    for a, b, name in PAIRS:
+    for a, b, name in COMPONENTS:
         rows = [_root_mean_square(field[..., a, b], weights) for field in known.values()]
         builder.add(
             f"error_budget_{name}", np.stack(rows), ("error_source", "layer"),
@@ -148,7 +145,7 @@ def add_budget(
         )  # fmt: skip
     if halves and error is not None:
         calibration = jackknife_calibration(halves, error, weights)
-        for a, b, name in PAIRS:
+        for a, b, name in COMPONENTS:
             builder.add(
                 f"jackknife_calibration_{name}", calibration[:, a, b], ("layer",),
                 f"spread between halves of the members over what the standard error of the "

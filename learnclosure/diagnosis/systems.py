@@ -9,7 +9,6 @@ import numpy.typing as npt
 from scipy.sparse import bmat, coo_matrix, csc_matrix, csr_matrix, diags_array
 from scipy.sparse.linalg import LinearOperator, cg, splu
 
-from learnclosure.diagnosis.tensor import LARGEST_CONDITION_NUMBER, condition_number
 from learnclosure.ensemble.grid import Geometry
 from learnclosure.errors import DiagnosisError
 
@@ -30,7 +29,7 @@ class LayerSystem(Protocol):
     """One layer's system, set up once for any number of right-hand sides."""
 
     def solve(self, right: FloatArray, start: FloatArray | None = None) -> FloatArray:
-        """Solve for K, shape (cell, 2, 2), given B of the same shape and perhaps a guess."""
+        """Solve for K, shape (cell, n, n), given B of the same shape and perhaps a guess."""
         ...
 
 
@@ -98,21 +97,23 @@ def smoothness_operator(geometry: Geometry, layer: int) -> csc_matrix:
 
 
 def _columns(right: FloatArray) -> FloatArray:
-    """Put the two columns of each cell's K under one another, one row of K a column."""
-    return np.concatenate([right[:, :, 0], right[:, :, 1]])
+    """Put the columns of each cell's K under one another, one row of K a column."""
+    return np.concatenate(list(np.moveaxis(right, -1, 0)))
 
 
 def _cells(found: FloatArray) -> FloatArray:
-    count = len(found) // 2
-    return np.stack([found[:count], found[count:]], axis=-1)
+    size = found.shape[1]
+    return np.moveaxis(found.reshape(size, -1, size), 0, -1)
 
 
-def _matrix(M: FloatArray, area: FloatArray, smooth: csr_matrix) -> csr_matrix:
+def _matrix(
+    M: FloatArray, area: FloatArray, smooth: csr_matrix, undetermined: BoolArray
+) -> csr_matrix:
     # A cell that neither data nor neighbours reach is held at zero; the others are not.
-    undetermined = condition_number(M) > LARGEST_CONDITION_NUMBER
     weak = 1e-12 * max(float(np.max(area * np.trace(M, axis1=-2, axis2=-1))), 1e-300)
-    blocks = [[diags_array(area * M[:, a, b]) for b in range(2)] for a in range(2)]
-    for a in range(2):
+    axes = range(M.shape[-1])
+    blocks = [[diags_array(area * M[:, a, b]) for b in axes] for a in axes]
+    for a in axes:
         blocks[a][a] = blocks[a][a] + smooth + diags_array(weak * undetermined)
     return bmat(blocks, format="csr")
 
@@ -122,16 +123,20 @@ class DirectSystem:
 
     Parameters
     ----------
-    M : ndarray, shape (cell, 2, 2)
+    M : ndarray, shape (cell, n, n)
     area : ndarray, shape (cell,), m2
     smooth : sparse matrix, shape (cell, cell), m2
         The smoothness operator times its strength.
+    undetermined : ndarray of bool, shape (cell,)
+        Where the gradients do not determine a tensor.
     """
 
-    def __init__(self, M: FloatArray, area: FloatArray, smooth: csr_matrix) -> None:
+    def __init__(
+        self, M: FloatArray, area: FloatArray, smooth: csr_matrix, undetermined: BoolArray
+    ) -> None:
         # The matrix is symmetric and positive definite: no pivoting, half the fill-in.
         self._factor = splu(
-            csc_matrix(_matrix(M, area, smooth)),
+            csc_matrix(_matrix(M, area, smooth, undetermined)),
             permc_spec="MMD_AT_PLUS_A",
             diag_pivot_thresh=0.0,
             options={"SymmetricMode": True},
@@ -139,7 +144,7 @@ class DirectSystem:
         self._area = area
 
     def solve(self, right: FloatArray, start: FloatArray | None = None) -> FloatArray:
-        """Solve for K, shape (cell, 2, 2), given B of the same shape; no guess is needed."""
+        """Solve for K, shape (cell, n, n), given B of the same shape; no guess is needed."""
         del start
         sides = _columns(self._area[:, None, None] * right)
         return _cells(self._factor.solve(sides))
@@ -154,6 +159,8 @@ class IterativeSystem:
     area : ndarray, shape (cell,), m2
     smooth : sparse matrix, shape (cell, cell), m2
         The smoothness operator times its strength.
+    undetermined : ndarray of bool, shape (cell,)
+        Where the gradients do not determine a tensor.
 
     Notes
     -----
@@ -161,8 +168,10 @@ class IterativeSystem:
     409-436; preconditioned by the inverse of the two-by-two blocks on the diagonal.
     """
 
-    def __init__(self, M: FloatArray, area: FloatArray, smooth: csr_matrix) -> None:
-        self._matrix = _matrix(M, area, smooth)
+    def __init__(
+        self, M: FloatArray, area: FloatArray, smooth: csr_matrix, undetermined: BoolArray
+    ) -> None:
+        self._matrix = _matrix(M, area, smooth, undetermined)
         self._area = area
         count = len(area)
         diagonal = self._matrix.diagonal()

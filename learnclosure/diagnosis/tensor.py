@@ -9,6 +9,11 @@ import numpy.typing as npt
 
 FloatArray = npt.NDArray[np.float64]
 
+COMPONENTS = tuple(
+    (a, b, f"{row}{column}") for a, row in enumerate("xy") for b, column in enumerate("xy")
+)
+"""Row and column of each component of a tensor, and its name (xx, xy, yx, yy)."""
+
 LARGEST_CONDITION_NUMBER = 50.0
 """Cells whose mean tracer gradients are worse conditioned have no tensor of their own."""
 

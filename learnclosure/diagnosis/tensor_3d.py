@@ -14,10 +14,9 @@ from typing import NamedTuple
 
 import numpy as np
 import numpy.typing as npt
-from scipy.sparse import bmat, csc_matrix, diags_array
-from scipy.sparse.linalg import splu
+from scipy.sparse import csr_matrix
 
-from learnclosure.diagnosis.systems import smoothness_operator
+from learnclosure.diagnosis.systems import DirectSystem, smoothness_operator
 from learnclosure.diagnosis.tensor import LARGEST_CONDITION_NUMBER
 from learnclosure.ensemble.grid import Geometry
 
@@ -203,21 +202,9 @@ def smooth_tensor_3d(
         strength = smoothing_length**2 * float(np.sum(weight * trace) / np.sum(weight)) / 3.0
         smooth = strength * smoothness_operator(geometry, layer)[wet][:, wet]
         undetermined = condition[layer].ravel()[wet] > LARGEST_CONDITION_NUMBER
-        # A cell that neither data nor neighbours reach is held at zero; the others are not.
-        hold = diags_array(1e-12 * float(np.max(weight * trace)) * undetermined)
-        blocks = [[diags_array(weight * M[:, a, b]) for b in range(3)] for a in range(3)]
-        for a in range(3):
-            blocks[a][a] = blocks[a][a] + smooth + hold
-        factor = splu(
-            csc_matrix(bmat(blocks)),
-            permc_spec="MMD_AT_PLUS_A",
-            diag_pivot_thresh=0.0,
-            options={"SymmetricMode": True},
-        )
-        right = weight[:, None, None] * equations.B[layer].reshape(-1, 3, 3)[wet]
-        found = factor.solve(np.concatenate([right[:, :, b] for b in range(3)]))
-        columns = found.reshape(3, len(wet), 3)
-        tensor[layer].reshape(-1, 3, 3)[wet] = np.moveaxis(columns, 0, -1)
+        system = DirectSystem(M, weight, csr_matrix(smooth), undetermined)
+        found = system.solve(equations.B[layer].reshape(-1, 3, 3)[wet])
+        tensor[layer].reshape(-1, 3, 3)[wet] = found
     return _unstretched(tensor, equations.stretching)
 
 

@@ -8,7 +8,7 @@ import numpy as np
 import numpy.typing as npt
 
 from learnclosure.ensemble.density_layers import DensityLayers
-from learnclosure.ensemble.layer_quantity import LevelSource
+from learnclosure.ensemble.protocol import EnsembleSource
 from learnclosure.errors import SourceError, StudyError
 from learnclosure.study import DiagnosisSettings
 
@@ -23,7 +23,7 @@ class ThicknessWeighted:
 
     Parameters
     ----------
-    source : LevelSource
+    source : EnsembleSource
         An open ensemble whose fields hold ``thickness``.
 
     Attributes
@@ -43,7 +43,7 @@ class ThicknessWeighted:
 
     weighted = True
 
-    def __init__(self, source: LevelSource) -> None:
+    def __init__(self, source: EnsembleSource) -> None:
         if source.grid.vertical != "layers":
             raise StudyError(
                 "thickness-weighted averages need layers",
@@ -139,19 +139,19 @@ class ThicknessWeighted:
 
 
 def averaged(
-    source: LevelSource, settings: DiagnosisSettings
-) -> LevelSource | DensityLayers | ThicknessWeighted:
+    source: EnsembleSource, settings: DiagnosisSettings
+) -> EnsembleSource | DensityLayers | ThicknessWeighted:
     """See an ensemble as the study wants it averaged.
 
     Parameters
     ----------
-    source : LevelSource
+    source : EnsembleSource
         An open ensemble.
     settings : DiagnosisSettings
 
     Returns
     -------
-    LevelSource
+    EnsembleSource
         The ensemble itself, or one that offers the same on remapped layers or with
         thickness as weight.
 

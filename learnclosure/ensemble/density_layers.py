@@ -13,10 +13,10 @@ from learnclosure.ensemble.active import interface_height
 from learnclosure.ensemble.grid import Grid
 from learnclosure.ensemble.layer_quantity import (
     KEY,
-    LevelSource,
     edges_in_si,
     layer_quantity,
 )
+from learnclosure.ensemble.protocol import EnsembleSource
 from learnclosure.ensemble.remapping import inverted_columns, to_layers
 from learnclosure.ensemble.seawater import buoyancy_from_density
 from learnclosure.errors import SourceError, StudyError
@@ -56,7 +56,7 @@ class DensityLayers:
 
     Parameters
     ----------
-    source : LevelSource
+    source : EnsembleSource
         An open ensemble on levels.
     settings : LayerSettings
     weighted : bool, optional
@@ -86,7 +86,7 @@ class DensityLayers:
     """
 
     def __init__(
-        self, source: LevelSource, settings: LayerSettings, *, weighted: bool = True
+        self, source: EnsembleSource, settings: LayerSettings, *, weighted: bool = True
     ) -> None:
         if source.grid.vertical != "levels":
             raise StudyError(

@@ -4,12 +4,11 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
-from typing import Protocol
 
 import numpy as np
 import numpy.typing as npt
 
-from learnclosure.ensemble.grid import Grid
+from learnclosure.ensemble.protocol import EnsembleSource
 from learnclosure.ensemble.reader import Ensemble
 from learnclosure.ensemble.roles import require_variable
 from learnclosure.ensemble.seawater import (
@@ -29,27 +28,6 @@ LEAST_KELVIN = 200.0
 LARGEST_DENSITY_ANOMALY = 100.0
 """In kg m-3; no seawater is as dense as 1000 kg m-3 and this, or as light as this."""
 DENSITY_OFFSET = 1000.0
-
-
-class LevelSource(Protocol):
-    """What remapping to layers asks of an ensemble on levels."""
-
-    name: str
-    split: str
-    grid: Grid
-    member_labels: tuple[int | str, ...]
-    times: FloatArray
-    tracers: tuple[str, ...]
-    withheld_tracers: tuple[str, ...]
-    units: dict[str, str]
-    has_buoyancy: bool
-    active: tuple[str, ...]
-    left_out_gradients: dict[str, FloatArray]
-    assumptions: tuple[str, ...]
-
-    def fields(self, time: int) -> dict[str, FloatArray]:
-        """Return all fields of one time, shape (member, layer, y, x)."""
-        ...
 
 
 @dataclass(frozen=True)
@@ -114,12 +92,12 @@ def reference_pressure(given: float | str) -> float:
     return pressure
 
 
-def layer_quantity(source: LevelSource, settings: LayerSettings) -> LayerQuantity:
+def layer_quantity(source: EnsembleSource, settings: LayerSettings) -> LayerQuantity:
     """Find the quantity a study bounds layers by.
 
     Parameters
     ----------
-    source : LevelSource
+    source : EnsembleSource
     settings : LayerSettings
 
     Returns
@@ -146,7 +124,7 @@ def layer_quantity(source: LevelSource, settings: LayerSettings) -> LayerQuantit
     return _variable(source, name)
 
 
-def _with_temperature(source: LevelSource, wanted: str) -> Ensemble:
+def _with_temperature(source: EnsembleSource, wanted: str) -> Ensemble:
     """Return the ensemble if it reads a temperature."""
     if isinstance(source, Ensemble) and "temperature" in source.roles.stratifying:
         return source
@@ -158,7 +136,7 @@ def _with_temperature(source: LevelSource, wanted: str) -> Ensemble:
     )
 
 
-def _potential_density(source: LevelSource, settings: LayerSettings) -> LayerQuantity:
+def _potential_density(source: EnsembleSource, settings: LayerSettings) -> LayerQuantity:
     ensemble = _with_temperature(source, "potential density")
     equation = ensemble.equation
     assert equation is not None, "a temperature comes with an equation of state"
@@ -173,7 +151,7 @@ def _potential_density(source: LevelSource, settings: LayerSettings) -> LayerQua
     return LayerQuantity("potential density", "kg m-3", read, True, notes)
 
 
-def _temperature(source: LevelSource) -> LayerQuantity:
+def _temperature(source: EnsembleSource) -> LayerQuantity:
     ensemble = _with_temperature(source, "temperature")
     notes = (f"layers by the temperature '{ensemble.roles.temperature}' as the files hold it",)
     return LayerQuantity(
@@ -181,7 +159,7 @@ def _temperature(source: LevelSource) -> LayerQuantity:
     )
 
 
-def _buoyancy(source: LevelSource) -> LayerQuantity:
+def _buoyancy(source: EnsembleSource) -> LayerQuantity:
     if not source.has_buoyancy:
         raise RoleError(
             "layers of buoyancy need a buoyancy",
@@ -206,7 +184,7 @@ def _buoyancy(source: LevelSource) -> LayerQuantity:
     return LayerQuantity("buoyancy", "m s-2", read, False, ("layers by buoyancy",))
 
 
-def _tracer(source: LevelSource, name: str, known: tuple[str, ...]) -> LayerQuantity:
+def _tracer(source: EnsembleSource, name: str, known: tuple[str, ...]) -> LayerQuantity:
     if name not in known:
         raise RoleError(
             "the quantity of layers is unknown",

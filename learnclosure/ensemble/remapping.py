@@ -12,36 +12,16 @@ thickness and content.
 
 from __future__ import annotations
 
-from collections.abc import Callable
-from typing import Any, ParamSpec, TypeVar, cast
-
-import numba
 import numpy as np
 import numpy.typing as npt
 
+from learnclosure.compiled import compiled, part_of_kernel
+
 FloatArray = npt.NDArray[np.float64]
 BoolArray = npt.NDArray[np.bool_]
-P = ParamSpec("P")
-R = TypeVar("R")
-
-OPTIONS: dict[str, Any] = {"error_model": "numpy", "nogil": True}
 
 
-def compiled(function: Callable[P, R]) -> Callable[P, R]:
-    """Compile a kernel, keeping the machine code on disk wherever a cache can be written."""
-    try:
-        return cast("Callable[P, R]", numba.njit(cache=True, **OPTIONS)(function))
-    except RuntimeError:
-        # Raised where neither the package nor the user's cache folder can be written to.
-        return cast("Callable[P, R]", numba.njit(**OPTIONS)(function))
-
-
-def part_of_kernel(function: Callable[P, R]) -> Callable[P, R]:
-    """Let kernels take a function in as if it were written out in them."""
-    return cast("Callable[P, R]", numba.njit(inline="always", **OPTIONS)(function))
-
-
-@part_of_kernel
+@part_of_kernel()
 def _layer_of(value: float, edges: FloatArray, guess: int) -> int:
     """Count the edges at or below a value, searching from a guess."""
     layer = guess
@@ -52,7 +32,7 @@ def _layer_of(value: float, edges: FloatArray, guess: int) -> int:
     return layer
 
 
-@part_of_kernel
+@part_of_kernel()
 def _hand_out(
     low: float,
     high: float,
@@ -85,7 +65,7 @@ def _hand_out(
         inside[layer, len(values)] += part
 
 
-@part_of_kernel
+@part_of_kernel()
 def _lesser(one: float, other: float) -> float:
     """Return what is nearer to zero of two numbers of one sign, else zero."""
     if one * other <= 0.0:
@@ -93,7 +73,7 @@ def _lesser(one: float, other: float) -> float:
     return one if abs(one) < abs(other) else other
 
 
-@part_of_kernel
+@part_of_kernel()
 def _set_changes(
     column: FloatArray, k: int, own: float, above: float, below: float, change: FloatArray
 ) -> None:
@@ -109,7 +89,7 @@ def _set_changes(
         change[:] = 0.0
 
 
-@compiled
+@compiled()
 def remap_columns(
     fields: FloatArray,
     quantity: FloatArray,

@@ -12,6 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
+from learnclosure.ensemble.axes import ALONG
 from learnclosure.ensemble.conversions import SECONDS_PER_DAY
 from learnclosure.ensemble.layout import LayoutReader
 from learnclosure.ensemble.roles import Roles
@@ -109,7 +110,7 @@ def find_total_fluxes(
 def _check_fit(first: Member, name: str, tracer: str, face: str, axis: str) -> None:
     own, cells = first.dataset[name].sizes, first.dataset[tracer].sizes
     larger = sum(size - cell for size, cell in zip(own.values(), cells.values(), strict=False))
-    along = {"east": "x", "west": "x", "north": "y", "south": "y"}.get(face)
+    along = ALONG.get(face)
     # Faces may be one more than cells along their axis, and have a dimension of their own.
     grown = larger == 1 and along is not None
     if len(own) != len(cells) or not (larger == 0 or grown) or along not in (None, axis):

@@ -12,6 +12,7 @@ import numpy as np
 import numpy.typing as npt
 
 from learnclosure.features.mean_state import MeanState
+from learnclosure.features.smoothing import running_mean
 
 FloatArray = npt.NDArray[np.float64]
 
@@ -40,20 +41,6 @@ class Jet(NamedTuple):
     speed: FloatArray
     width: FloatArray
     found: npt.NDArray[np.bool_]
-
-
-def _running_mean(values: FloatArray, wet: FloatArray, axis: int, periodic: bool) -> FloatArray:
-    """Mean of each cell and its sea neighbours on both sides."""
-    total, count = values * wet, wet.copy()
-    for step in (1, -1):
-        shifted, there = np.roll(values * wet, step, axis), np.roll(wet, step, axis)
-        if not periodic:
-            edge = [slice(None)] * values.ndim
-            edge[axis] = slice(0, 1) if step > 0 else slice(-1, None)
-            shifted[tuple(edge)] = 0.0
-            there[tuple(edge)] = 0.0
-        total, count = total + shifted, count + there
-    return np.asarray(total / np.maximum(count, 1.0))
 
 
 def _sections(
@@ -109,8 +96,8 @@ def find_jet(state: MeanState) -> Jet:
     eastward, northward = state.x_velocity[0] * wet, state.y_velocity[0] * wet
     along_x = np.sum(eastward**2) >= np.sum(northward**2)
     flow = eastward if along_x else northward
-    flow = _running_mean(flow, wet, 0, geometry.periodic_y)
-    flow = _running_mean(flow, wet, 1, geometry.periodic_x)
+    flow = running_mean(flow, wet, 0, geometry.periodic_y)
+    flow = running_mean(flow, wet, 1, geometry.periodic_x)
     if along_x:
         # North lies to the left of an eastward flow.
         return _sections(flow, geometry.dy, wet, geometry.periodic_y, 1.0)

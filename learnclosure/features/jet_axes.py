@@ -10,6 +10,7 @@ import numpy.typing as npt
 
 from learnclosure.ensemble.grid import Geometry
 from learnclosure.features.nearest import Positions
+from learnclosure.features.smoothing import running_mean
 
 FloatArray = npt.NDArray[np.float64]
 IndexArray = npt.NDArray[np.int64]
@@ -79,8 +80,8 @@ class _Surface:
         weight = self.wet.astype(np.float64)
         parts = []
         for flow in (eastward * weight, northward * weight):
-            smooth = _running_mean(flow, weight, 0, geometry.periodic_y)
-            parts.append(_running_mean(smooth, weight, 1, geometry.periodic_x) * weight)
+            smooth = running_mean(flow, weight, 0, geometry.periodic_y)
+            parts.append(running_mean(smooth, weight, 1, geometry.periodic_x) * weight)
         self.u, self.v = parts
         self.speed = np.hypot(self.u, self.v)
         self.background = float(np.median(self.speed[self.wet])) if self.wet.any() else 0.0
@@ -105,20 +106,6 @@ class _Surface:
                 total += share * self.speed[j % rows, i % columns]
                 sea += share
         return total, sea
-
-
-def _running_mean(values: FloatArray, wet: FloatArray, axis: int, periodic: bool) -> FloatArray:
-    """Mean of each cell and its sea neighbours on both sides."""
-    total, count = values * wet, wet.copy()
-    for step in (1, -1):
-        shifted, there = np.roll(values * wet, step, axis), np.roll(wet, step, axis)
-        if not periodic:
-            edge = [slice(None)] * values.ndim
-            edge[axis] = slice(0, 1) if step > 0 else slice(-1, None)
-            shifted[tuple(edge)] = 0.0
-            there[tuple(edge)] = 0.0
-        total, count = total + shifted, count + there
-    return np.asarray(total / np.maximum(count, 1.0))
 
 
 class _Ridge(NamedTuple):

@@ -8,6 +8,8 @@ from typing import Any
 import numpy as np
 import xarray as xr
 
+from learnclosure.diagnosis.artefact import cautions_of
+
 PAIRS = ("xx", "xy", "yx", "yy")
 FOLD_KINDS = ("random", "blocked", "region")
 MISSING = "–"
@@ -196,9 +198,4 @@ def diagnosis_cautions(statistics: Mapping[str, xr.Dataset]) -> list[str]:
     -------
     list of str
     """
-    return [
-        f"{name}: {said}"
-        for name, data in statistics.items()
-        for said in str(data.attrs.get("cautions", "")).split("; ")
-        if said
-    ]
+    return [f"{name}: {said}" for name, data in statistics.items() for said in cautions_of(data)]

@@ -138,6 +138,7 @@ class Channel:
         self._tracer_source = np.zeros((0, *plain), np.float32)
         self._tracer_start = 0
         self._window: WindowSums | None = None
+        self._no_window = WindowSums(self._tracers.shape)
         for member, generator in enumerate(generators):
             self.vorticity[member] = self._starting_vorticity(generator)
         self._invert()
@@ -281,8 +282,7 @@ class Channel:
         ----------
         steps : int
         """
-        members, _, _, *padded = self._tracers.shape
-        window = self._window or WindowSums((members, 2, 0, *padded))
+        window = self._window or self._no_window
         for _ in range(steps):
             if self._window is not None:
                 window.corner += self._corner

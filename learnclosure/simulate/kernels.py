@@ -25,44 +25,19 @@ the compiler may reorder sums here.
 
 from __future__ import annotations
 
-from collections.abc import Callable
-from typing import Any, ParamSpec, TypeVar, cast
-
-import numba
 import numpy as np
 import numpy.typing as npt
 
+from learnclosure.compiled import compiled, part_of_kernel
+
 Field = npt.NDArray[np.float32]
 Spectrum = npt.NDArray[np.complex64]
-P = ParamSpec("P")
-R = TypeVar("R")
 
 HALO = 3
 """Cells of margin on each side that the reconstruction needs."""
 
 
-OPTIONS: dict[str, Any] = {"fastmath": True, "error_model": "numpy", "nogil": True}
-
-
-def compiled(function: Callable[P, R]) -> Callable[P, R]:
-    """Compile a kernel, keeping the machine code on disk wherever a cache can be written."""
-    try:
-        return cast("Callable[P, R]", numba.njit(cache=True, **OPTIONS)(function))
-    except RuntimeError:
-        # Raised where neither the package nor the user's cache folder can be written to.
-        return cast("Callable[P, R]", numba.njit(**OPTIONS)(function))
-
-
-def part_of_kernel(function: Callable[P, R]) -> Callable[P, R]:
-    """Let kernels take a function in as if it were written out in them.
-
-    As machine code of its own it would be bound to a kernel in one way when that is
-    compiled and in another when that is read from disk, and rounding would differ.
-    """
-    return cast("Callable[P, R]", numba.njit(inline="always", **OPTIONS)(function))
-
-
-@compiled
+@compiled(reorder=True)
 def invert_spectrum(spectrum: Spectrum, ridge: Spectrum, inverse: Field, shift: Spectrum) -> None:
     """Turn the spectrum of potential vorticity into that of the streamfunction, in place.
 
@@ -91,7 +66,7 @@ def invert_spectrum(spectrum: Spectrum, ridge: Spectrum, inverse: Field, shift: 
                 )
 
 
-@part_of_kernel
+@part_of_kernel(reorder=True)
 def face_velocities(
     corner: Field, spacing: float, background: float, scale: float, west: Field, south: Field
 ) -> None:
@@ -131,7 +106,7 @@ def face_velocities(
     south[0, HALO : HALO + columns] = south[rows, HALO : HALO + columns]
 
 
-@part_of_kernel
+@part_of_kernel(reorder=True)
 def _wrap(padded: Field) -> None:
     """Fill the margin of a doubly periodic field."""
     rows, columns = padded.shape[0] - 2 * HALO, padded.shape[1] - 2 * HALO
@@ -144,7 +119,7 @@ def _wrap(padded: Field) -> None:
         padded[HALO + rows + row] = padded[HALO + row]
 
 
-@part_of_kernel
+@part_of_kernel(reorder=True)
 def _flux(velocity: Field, a: Field, b: Field, c: Field, d: Field, e: Field, f: Field,
           out: Field) -> None:  # fmt: skip
     """Compute 60 times the upwind flux through the faces between cells ``c`` and ``d``."""
@@ -163,7 +138,7 @@ def _flux(velocity: Field, a: Field, b: Field, c: Field, d: Field, e: Field, f: 
         out[face] = speed * centred - abs(speed) * rough
 
 
-@part_of_kernel
+@part_of_kernel(reorder=True)
 def _increment(
     west: Field, east: Field, south: Field, north: Field, source: Field, decay: float,
     field: Field, out: Field,
@@ -177,7 +152,7 @@ def _increment(
         )  # fmt: skip
 
 
-@part_of_kernel
+@part_of_kernel(reorder=True)
 def _extrapolate(field: Field, now: Field, newer: Field, older: Field, weights: Field) -> None:
     """Add the Adams-Bashforth sum of increments and keep this one for later."""
     first, second, third = weights[0], weights[1], weights[2]
@@ -187,7 +162,7 @@ def _extrapolate(field: Field, now: Field, newer: Field, older: Field, weights: 
         older[cell] = increment
 
 
-@part_of_kernel
+@part_of_kernel(reorder=True)
 def advance_field(
     padded: Field, newer: Field, older: Field, source: Field, decay: float,
     west: Field, south: Field, weights: Field, work: Field,
@@ -243,14 +218,14 @@ def advance_field(
     _extrapolate(body, now, newer.reshape(cells)[:inner], older.reshape(cells)[:inner], weights)
 
 
-@part_of_kernel
+@part_of_kernel(reorder=True)
 def _gather(total: Field, part: Field) -> None:
     """Add to a running sum."""
     for cell in range(total.size):
         total[cell] += part[cell]
 
 
-@part_of_kernel
+@part_of_kernel(reorder=True)
 def _separation(corner: Field, out: Field, mean: Field) -> None:
     """Average the upper minus the lower streamfunction to cell centres, and along x."""
     _, rows, columns = corner.shape
@@ -270,7 +245,7 @@ def _separation(corner: Field, out: Field, mean: Field) -> None:
         mean[row] = total / columns
 
 
-@part_of_kernel
+@part_of_kernel(reorder=True)
 def vorticity_source(
     layer: int, vorticity: Field, ridge: Field, separation: Field, mean: Field, target: Field,
     south: Field, coefficients: Field, out: Field,
@@ -317,7 +292,7 @@ def vorticity_source(
                 )
 
 
-@compiled
+@compiled(reorder=True)
 def advance_members(
     corner: Field, vorticity: Field, vorticity_newer: Field, vorticity_older: Field,
     tracers: Field, tracers_newer: Field, tracers_older: Field, tracer_source: Field,
